@@ -33,7 +33,7 @@ class Receipt:
     first_snapshot : number of its first snapshot in the run; None while an earlier batch is missing
     n_snapshots : snapshots in it
     duplicate : True when the service had it already; it counts once
-    applied_through : snapshots of the run that are in the basis
+    applied_through : number of the last batch that the engine has taken in, or None before the first
     verdict : state of the run at the moment of the receipt
     advice : "continue", or "may stop" once the modes have settled
     snapshots_to_go : forecast, or None when there is none
@@ -43,7 +43,7 @@ class Receipt:
     first_snapshot: int | None
     n_snapshots: int
     duplicate: bool
-    applied_through: int
+    applied_through: int | None
     verdict: State
     advice: Advice
     snapshots_to_go: SnapshotsToGo | None
@@ -111,14 +111,18 @@ def parse_receipt(answer: Mapping[str, Any]) -> Receipt:
     """A receipt from its JSON."""
     return Receipt(
         sequence=int(answer["sequence"]),
-        first_snapshot=None if answer.get("first_snapshot") is None else int(answer["first_snapshot"]),
+        first_snapshot=_optional_int(answer.get("first_snapshot")),
         n_snapshots=int(answer["n_snapshots"]),
         duplicate=bool(answer.get("duplicate", False)),
-        applied_through=int(answer.get("applied_through") or 0),
+        applied_through=_optional_int(answer.get("applied_through")),
         verdict=cast(State, answer["verdict"]),
         advice="may stop" if answer.get("advice") == "may stop" else "continue",
         snapshots_to_go=_parse_to_go(answer.get("snapshots_to_go")),
     )
+
+
+def _optional_int(value: Any) -> int | None:
+    return None if value is None else int(value)
 
 
 def _parse_to_go(answer: Mapping[str, Any] | None) -> SnapshotsToGo | None:

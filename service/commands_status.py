@@ -1,0 +1,107 @@
+"""``slackwater status``: all runs in a table, or one run in detail."""
+
+from __future__ import annotations
+
+import json
+from typing import Annotated, Any
+
+import typer
+from rich.console import Console, Group
+from rich.table import Table
+from rich.text import Text
+
+from service.commands_wait import DEFAULT_URL, Json, Url, failures_end_with_codes
+from service.verdict_text import (
+    STYLE_OF_STATE,
+    angle,
+    group_name,
+    groups_table,
+    headline,
+    max_angle_of,
+    modes_table,
+    number_lines,
+    to_go,
+    worst_group,
+)
+from slackwater_client import Client, ConvergenceReport, Run
+
+# Each run costs a request, and no terminal shows more at once.
+MAX_LISTED_RUNS = 100
+
+
+def status(
+    run: Annotated[
+        str | None, typer.Argument(metavar="[RUN]", help="Id of a run, for details.", show_default=False)
+    ] = None,
+    url: Url = DEFAULT_URL,
+    as_json: Json = False,
+) -> None:
+    """Show all runs and their verdicts, or one RUN in detail.
+
+    Exit codes: 0 shown, 1 something went wrong, 2 wrong usage, 7 the service cannot be reached, 8 no such run.
+    """
+    with failures_end_with_codes(), Client(url) as client:
+        if run is None:
+            _show_all(client, as_json)
+        else:
+            _show_one(client.run(run), as_json)
+
+
+def _show_one(run: Run, as_json: bool) -> None:
+    report = run.convergence()
+    if as_json:
+        print(json.dumps({"run": run.resource, "convergence": report}, indent=2))
+        return
+    Console().print(_detail(run, report))
+
+
+def _show_all(client: Client, as_json: bool) -> None:
+    runs = client.runs()
+    rows = [(run, run.convergence()) for run in runs[:MAX_LISTED_RUNS]]
+    if as_json:
+        listed: list[dict[str, Any]] = [{"run": run.resource, "verdict": it["verdict"]} for run, it in rows]
+        print(json.dumps({"runs": listed, "left_out": len(runs) - len(rows)}, indent=2))
+        return
+    console = Console()
+    console.print(_overview(rows) if rows else f"no runs at {client.url}")
+    if len(runs) > len(rows):
+        console.print(f"{len(runs) - len(rows)} more runs are not shown")
+
+
+def _overview(rows: list[tuple[Run, ConvergenceReport]]) -> Table:
+    """One row for each run: is it settled, what holds it back, how long to go."""
+    table = Table()
+    for heading in ("run", "name", "status", "verdict", "snapshots", "bound / tolerance", "held by", "to go"):
+        table.add_column(
+            heading, justify="right" if heading in ("snapshots", "bound / tolerance") else "left"
+        )
+    for run, report in rows:
+        state, worst = report["verdict"]["state"], worst_group(report["groups"])
+        tolerance = max_angle_of(run.declaration)
+        table.add_row(
+            run.id,
+            Text(run.name),
+            str(run.resource["status"]),
+            Text(state, style=STYLE_OF_STATE.get(state, "")),
+            f"{report['n_snapshots']:,}",
+            f"{angle(worst['angle_bound_deg'])} / {tolerance:g} deg" if worst else "-",
+            group_name(worst) if worst and not worst["settled"] else "-",
+            to_go(report) or "-",
+        )
+    return table
+
+
+def _detail(run: Run, report: ConvergenceReport) -> Group:
+    """Everything about one run that fits a screen."""
+    tolerance, state = max_angle_of(run.declaration), report["verdict"]["state"]
+    parts: list[Any] = [
+        Text(f"{run.name} ({run.id}), {run.resource['status']}"),
+        Text(headline(report, tolerance), style=STYLE_OF_STATE.get(state, "")),
+    ]
+    if run.resource.get("reason"):
+        parts.append(Text(f"failed: {run.resource['reason']}", style=STYLE_OF_STATE["failed"]))
+    unit = str(run.declaration["time"]["unit"])
+    parts += [Text(line) for line in number_lines(report, unit)]
+    if report["groups"]:
+        parts += [groups_table(report, tolerance), modes_table(report)]
+    return Group(*parts)

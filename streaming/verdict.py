@@ -4,12 +4,15 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from streaming.declaration import Model
 from streaming.report import Reason, State
 
 
-@dataclass(frozen=True)
-class Look:
-    """What one look leaves for the next ones: the record length, the wanted groups, and what it decided."""
+class Look(Model):
+    """What one look leaves for the next ones: the record length, the wanted groups, and what it decided.
+
+    ``groups`` are index ranges [start, stop), counted from 0; ``fulfilled`` says that no clause failed.
+    """
 
     n_snapshots: int
     groups: tuple[tuple[int, int], ...]
@@ -45,14 +48,28 @@ def decide(
     if not fulfilled:
         state = next(s for s in _PRECEDENCE if any(f.state == s for f in findings))
         reasons = tuple(Reason(code=f.code, text=f.text) for f in findings)
-        return Look(n_snapshots, groups, False, state, reasons, None)
+        return Look(
+            n_snapshots=n_snapshots,
+            groups=groups,
+            fulfilled=False,
+            state=state,
+            reasons=reasons,
+            settled_since=None,
+        )
     agreeing = 1 + _streak(groups, previous)
     if agreeing < hold:
         text = (
             f"All bounds are within tolerance at {agreeing} of {hold} looks in a row with the same groups; "
             "go on until the next look."
         )
-        return Look(n_snapshots, groups, True, State.UNSETTLED, (Reason(code="holding", text=text),), None)
+        return Look(
+            n_snapshots=n_snapshots,
+            groups=groups,
+            fulfilled=True,
+            state=State.UNSETTLED,
+            reasons=(Reason(code="holding", text=text),),
+            settled_since=None,
+        )
     since = previous[-1].settled_since if previous and previous[-1].state == State.SETTLED else None
     return Look(
         n_snapshots,

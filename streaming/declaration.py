@@ -32,9 +32,9 @@ class Model(BaseModel):
 
 
 class FieldSpec(Model):
-    """One physical quantity given at every point."""
+    """One physical quantity given at every point. The name becomes a variable name in the files written."""
 
-    name: Name
+    name: Annotated[str, StringConstraints(pattern=r"^[A-Za-z][A-Za-z0-9_]{0,39}$")]
     unit: str = Field(default="1", max_length=40, description="unit symbol, for example m/s")
 
 

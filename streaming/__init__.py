@@ -10,10 +10,7 @@ from streaming.errors import (
     StreamError,
 )
 from streaming.report import Convergence, State
-try:
-    from streaming.stream import SnapshotStream
-except ModuleNotFoundError:
-    pass
+from streaming.stream import SnapshotStream
 
 __all__ = [
     "CheckpointError",

@@ -105,7 +105,7 @@ class Assessment:
 
 def assess(moments: Moments, criterion: Criterion, context: Context) -> Assessment:
     """Evaluate a run from its block moments."""
-    startup = find_startup(moments, criterion.n_modes)
+    startup = find_startup(moments, criterion.n_modes) if criterion.startup == "find" else Startup(0, False)
     kept = moments.since(startup.first_block)
     modal = modal_moments(kept, kept.rank)
     grouping = find_groups(modal, criterion.n_modes)
@@ -268,7 +268,7 @@ def _group_reports(a: Assessment) -> list[GroupReport]:
             angle_deg=m.angle_deg,
             angle_bound_deg=m.bound_deg,
             truncation_angle_deg=m.truncation_deg,
-            energy_halfwidth=half,
+            energy_halfwidth=half if np.isfinite(half) else None,
             settled=a.look.state == State.SETTLED,
         )
         for (start, stop), m, half in zip(a.groups, a.misalignments, a.group_halfwidths, strict=True)

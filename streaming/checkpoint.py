@@ -71,8 +71,8 @@ def _root_attributes(stream: SnapshotStream) -> dict[str, Any]:
         "slackwater_checkpoint": VERSION,
         "declaration": stream.declaration.model_dump_json(),
         "n_snapshots": stream.n_applied,
-        "comment": "Settled modes mean that the sampling of what was recorded suffices; they say nothing of mesh, model, "
-        "calibration or of states that the run has not visited.",
+        "comment": "Settled modes mean that the sampling of what was recorded suffices; they say nothing of mesh, "
+        "model, calibration or of states that the run has not visited.",
     }
 
 
@@ -121,9 +121,7 @@ def _write_grid(root: zarr.Group, d: RunDeclaration, positions: Numbers | None) 
     return names
 
 
-def _write(
-    group: zarr.Group, name: str, values: Numbers, dims: tuple[str, ...] | None, **attributes: Any
-) -> None:
+def _write(group: zarr.Group, name: str, values: Numbers, dims: tuple[str, ...] | None, **attributes: Any) -> None:
     array = group.create_array(
         name,
         shape=values.shape,

@@ -6,6 +6,7 @@ refused, so that a misspelt option is an error and not a silent default.
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import Annotated, Literal
 
 import numpy as np
@@ -61,14 +62,12 @@ class RectilinearGrid(Model):
     """Points on the product of axes, last axis fastest; each axis strictly increasing."""
 
     kind: Literal["rectilinear"]
-    axes: list[Annotated[list[Finite], Field(min_length=1, max_length=10**6)]] = Field(
-        min_length=1, max_length=3
-    )
+    axes: list[Annotated[list[Finite], Field(min_length=1, max_length=10**6)]] = Field(min_length=1, max_length=3)
 
     @model_validator(mode="after")
     def _increasing(self) -> RectilinearGrid:
         for k, axis in enumerate(self.axes):
-            if any(b <= a for a, b in zip(axis, axis[1:], strict=False)):
+            if any(b <= a for a, b in pairwise(axis)):
                 raise ValueError(f"axis {k} must be strictly increasing")
         return self
 
@@ -117,6 +116,8 @@ class Criterion(Model):
     endless record of the same flow would give, at the stated ``confidence``. ``min_duration`` is in the time
     unit of the run; no statistic can see a state that the flow has not visited, so set it from what you know
     of the slowest state. ``hold`` is how many looks in a row must agree; looks are geometrically spaced.
+    ``startup`` says whether a start-up transient is looked for and left out of modes and statistics, or the whole
+    record is kept.
     """
 
     n_modes: int = Field(default=6, ge=1, le=MAX_RANK)
@@ -127,6 +128,7 @@ class Criterion(Model):
     )
     min_duration: Positive | None = None
     hold: int = Field(default=2, ge=1, le=10)
+    startup: Literal["find", "keep"] = "find"
 
 
 class RunDeclaration(Model):

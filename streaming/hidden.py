@@ -42,4 +42,4 @@ def hidden_structure(modal: ModalMoments, n_modes: int, confidence: float = 0.95
     energy = max(float(values[-1]) - floor, 0.0) / max(n_probes, 1)
     wanted = modal.eigenvalues[: max(1, min(n_modes, modal.rank))]
     bound = energy * n_probes / float(chi2.ppf(1.0 - confidence, n_probes)) if n_probes else 0.0
-    return Hidden(energy, bound, DANGEROUS_SHARE * float(wanted[-1]))
+    return Hidden(energy, bound, DANGEROUS_SHARE * float(wanted.min(initial=np.inf if len(wanted) else 0.0)))

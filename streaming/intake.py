@@ -77,10 +77,8 @@ def parse_times(
     last : time of the snapshot before, or None
     n_new : snapshots in the batch
     """
-    if times is None:
-        given = (n_before + np.arange(n_new)) * (declaration.time.step or 1.0)
-    else:
-        given = np.asarray(times, dtype=np.float64)
+    step = declaration.time.step or 1.0
+    given: Array = np.asarray(step * np.arange(n_before, n_before + n_new) if times is None else times, np.float64)
     if given.shape != (n_new,):
         raise SnapshotError(f"{n_new} snapshots need {n_new} times, got shape {given.shape}")
     if not np.isfinite(given).all():

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
-from streaming.assessment import Look
 from streaming.report import Convergence
+from streaming.verdict import Look
 
 GROWTH = 1.25  # looks at n, 1.25 n, ...: 62 of them from 80 to 10^8 snapshots, so the history is bounded
 

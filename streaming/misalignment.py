@@ -100,6 +100,8 @@ def misalignment(
     modal: ModalMoments, group: tuple[int, int], confidence: float, width: int = 1
 ) -> Misalignment:
     """Bound the misalignment of a group with blocks joined ``width`` at a time."""
+    if modal.n_blocks < 2:
+        return Misalignment(1.0, 1.0, truncation_sine(modal, group), 1.0, 1.0, 0.0)
     turning = turning_scores(modal, group)
     variance = float(score_variance(turning, width).sum())
     longer = float(score_variance(turning, 2 * width).sum()) if modal.n_blocks > 4 * width else variance

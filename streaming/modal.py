@@ -139,6 +139,8 @@ def score_variance(scores: Array, width: int) -> Array:
     For ``width`` 1 and equal blocks this is sum_b (x_b - x)^2 / (B (B - 1)), the batch means estimate.
     """
     n_blocks = len(scores)
+    if n_blocks <= width:  # one block says nothing of the spread over time
+        return np.full(scores.shape[1:], np.inf)
     joined = joined_scores(scores, width)
     # In the mean, sums of `width` scores that add up to zero over the record hold width (1 - width / B) shares.
     unbiased = n_blocks / (len(joined) * width * (1.0 - width / n_blocks))

@@ -77,7 +77,8 @@ class Moments:
 
     def mean(self) -> Array:
         """Mean of z over all blocks, (R + p,)."""
-        return self.counts @ self.means / self.counts.sum()
+        mean: Array = self.counts @ self.means / self.counts.sum()
+        return mean
 
     def covariance(self) -> Array:
         """Covariance of z over all blocks (divisor N), (R + p, R + p)."""

@@ -75,7 +75,8 @@ class CoefficientRecord:
     def _read_entry(self, k: int) -> npt.NDArray[np.void]:
         self._file.flush()
         raw = os.pread(self._file.fileno(), self._entry.itemsize, k * self._entry.itemsize)
-        return np.frombuffer(raw, self._entry)[0]
+        entry: npt.NDArray[np.void] = np.frombuffer(raw, self._entry)[0]
+        return entry
 
     def fill(self, times: Array, coordinates: Array) -> None:
         """Start over from a record (N,) and (N, q) that is already in the current basis."""

@@ -56,7 +56,9 @@ class GroupReport(Model):
     angle_deg: float = Field(description="expected misalignment (root mean square)")
     angle_bound_deg: float = Field(description="bound on the misalignment at the stated confidence")
     truncation_angle_deg: float
-    energy_halfwidth: float = Field(description="half-width of the group's energy, relative to it")
+    energy_halfwidth: float | None = Field(
+        description="half-width of the group's energy, relative to it; null while a single block says nothing of it"
+    )
     settled: bool
 
 

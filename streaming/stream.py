@@ -34,6 +34,8 @@ _COUNTERS = (
     "repeated_snapshots",
     "discarded_energy",
     "total_energy",
+    "first_time",
+    "applied_time",
     "last_time",
     "closed",
 )
@@ -74,9 +76,7 @@ class SnapshotStream:
         self.declaration = _parse_declaration(declaration)
         self.positions = parse_positions(self.declaration, positions)
         d = self.declaration
-        self._tall = TallRows(
-            d.n_rows, d.rank, d.length_of_block, d.real_dtype, parse_weights(d, weights)
-        )
+        self._tall = TallRows(d.n_rows, d.rank, d.length_of_block, d.real_dtype, parse_weights(d, weights))
         self._ledger = Ledger(d.rank, N_PROBES, first_span(d.length_of_block))
         self._record = CoefficientRecord(d.rank, d.length_of_block, record_path)
         self._values: Array = np.zeros(0)
@@ -88,6 +88,8 @@ class SnapshotStream:
         self.n_applied = self.n_waiting = self.repeated_snapshots = 0
         self.discarded_energy = 0.0
         self.total_energy = 0.0
+        self.first_time: float | None = None
+        self.applied_time: float | None = None
         self.last_time: float | None = None
         self.closed = False
 
@@ -147,6 +149,7 @@ class SnapshotStream:
         self._tall.put(self.n_waiting, rows)
         self._times.append(times)
         self.n_waiting += len(rows)
+        self.first_time = float(times[0]) if self.first_time is None else self.first_time
         self.last_time = float(times[-1])
 
     def _apply_block(self) -> None:
@@ -168,6 +171,7 @@ class SnapshotStream:
         self.total_energy += float(energies.sum())
         self.discarded_energy += step.discarded_energy
         self.n_applied, self.n_waiting, self._times = self.n_applied + n, 0, []
+        self.applied_time = float(times[-1])
         if self._plan.due(self.n_applied):
             self._look()
 
@@ -188,20 +192,31 @@ class SnapshotStream:
     # -- the verdict ----------------------------------------------------------------------------------------
 
     def _look(self) -> None:
-        assessment = self._assess()
-        self._plan.take(self.n_applied, assessment, self._report(assessment))
+        """Evaluate the criterion; only here the verdict may change."""
+        assessment = self._assess(at_look=True)
+        self._plan.take(self.n_applied, assessment.look, report(assessment, self._context(at_look=True)))
 
-    def _assess(self) -> Assessment:
+    def _assess(self, at_look: bool = False) -> Assessment:
         if self._current is None or self._current[0] != self.n_applied:
             with one_blas_thread():
-                self._current = (self.n_applied, assess(self.moments(), self.declaration.criterion, self._context()))
+                found = assess(self.moments(), self.declaration.criterion, self._context(at_look))
+            self._current = (self.n_applied, found)
         return self._current[1]
 
-    def _report(self, assessment: Assessment) -> Convergence:
-        return report(assessment, self._context())
-
-    def _context(self) -> Context:
-        raise NotImplementedError
+    def _context(self, at_look: bool) -> Context:
+        span = 0.0 if self.first_time is None or self.applied_time is None else self.applied_time - self.first_time
+        return Context(
+            n_snapshots=self.n_applied,
+            block_length=self.declaration.length_of_block,
+            waiting_snapshots=self.n_waiting,
+            n_rows=self.declaration.n_rows,
+            time_step=span / (self.n_applied - 1) if self.n_applied > 1 else None,
+            time_span=span,
+            repeated_snapshots=self.repeated_snapshots,
+            previous=self._plan.looks,
+            at_look=at_look,
+            reference=self.declaration.reference,
+        )
 
     def moments(self) -> Moments:
         """Return the block moments that all statistics are computed from, in the current basis."""
@@ -211,7 +226,7 @@ class SnapshotStream:
 
     def convergence(self) -> Convergence:
         """Return the numbers and the verdict at this moment."""
-        return self._report(self._assess())
+        return report(self._assess(), self._context(at_look=False))
 
     @property
     def history(self) -> tuple[Convergence, ...]:
@@ -253,7 +268,6 @@ class SnapshotStream:
         times, coordinates = self._record.read()
         turn = assessment.mode_rotation[:, : len(assessment.mode_rotation) if n is None else n]
         return times, (coordinates[:, : len(turn)] - assessment.coordinate_mean) @ turn
-
 
     # -- state ------------------------------------------------------------------------------------------
 

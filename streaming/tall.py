@@ -2,7 +2,8 @@
 
 Rows are cut into panels, (rows, width), each contiguous and small enough for the cache. A panel holds the p probes
 first, then the r basis rows and the snapshots of the open block, so that one product gives every inner product
-of the new snapshots that an update needs. Panels are worked on side by side, each by one BLAS thread, and their small results are summed
+of the new snapshots that an update needs.
+Panels are worked on side by side, each by one BLAS thread, and their small results are summed
 in panel order: results do not depend on the number of threads, bit for bit.
 
 This is the seam for slabs of rows elsewhere: whoever offers the public methods below can stand in for it.
@@ -245,7 +246,7 @@ class TallRows:
         self.rank = len(state["basis"])
         rows = np.concatenate([state["basis"], state["waiting"]])
         self._panels[:, N_PROBES : N_PROBES + len(rows)] = self._to_panels(rows)
-        self._datum, self._sum = self._to_panels(state["datum"]), self._to_panels(state["sum"])
+        self._datum[...], self._sum[...] = self._to_panels(state["datum"]), self._to_panels(state["sum"])
         self._scale = self._to_panels(state["scale"])
         self._has_datum = has_datum
 

@@ -52,9 +52,7 @@ class Update:
     discarded_largest: float
 
 
-def update_from_gram(
-    singular_values: Array, gram: Array, max_rank: int, dtype: str, condition: float
-) -> Update | None:
+def update_from_gram(singular_values: Array, gram: Array, max_rank: int, dtype: str, condition: float) -> Update | None:
     """Update from G = A A', or None when the energies to be kept do not stand clear of its round-off.
 
     Parameters

@@ -72,12 +72,12 @@ def decide(
         )
     since = previous[-1].settled_since if previous and previous[-1].state == State.SETTLED else None
     return Look(
-        n_snapshots,
-        groups,
-        True,
-        State.SETTLED,
-        (Reason(code="settled", text=summary),),
-        since or n_snapshots,
+        n_snapshots=n_snapshots,
+        groups=groups,
+        fulfilled=True,
+        state=State.SETTLED,
+        reasons=(Reason(code="settled", text=summary),),
+        settled_since=since or n_snapshots,
     )
 
 

@@ -21,7 +21,7 @@ def declaration(n_points: int, **changes: Any) -> dict[str, Any]:
         "n_points": n_points,
         "fields": [{"name": "p", "unit": "Pa"}],
         "dtype": "float64",
-        "criterion": {"n_modes": 1},
+        "criterion": {"n_modes": 1, "startup": "keep"},
     }
     return {**plain, **changes}
 

@@ -139,7 +139,8 @@ class TestKarhunenLoeve:
     def wiener(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         h, k = 1.0 / self.n, np.arange(1, self.n + 1)
         t = h * k
-        return np.minimum.outer(t, t), np.where(k == self.n, h / 2, h), h**2 / (4 * np.sin((2 * k - 1) * np.pi * h / 4) ** 2)
+        exact = h**2 / (4 * np.sin((2 * k - 1) * np.pi * h / 4) ** 2)
+        return np.minimum.outer(t, t), np.where(k == self.n, h / 2, h), exact
 
     def test_wiener_process_with_trapezoid_weights(self, make_stream: MakeStream) -> None:
         kernel, weights, exact = self.wiener()
@@ -209,9 +210,7 @@ class TestWaves:
             (100, 40.354354454823, 39.628484739155),
         ],
     )
-    def test_any_length_without_the_mean(
-        self, make_stream: MakeStream, n: int, first: float, second: float
-    ) -> None:
+    def test_any_length_without_the_mean(self, make_stream: MakeStream, n: int, first: float, second: float) -> None:
         values = self.values(make_stream, self.wave(n, 0.37))
         np.testing.assert_allclose(values[:2], [first, second], rtol=CLOSED_FORM)
 

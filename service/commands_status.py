@@ -31,14 +31,14 @@ MAX_LISTED_RUNS = 100
 
 def status(
     run: Annotated[
-        str | None, typer.Argument(metavar="[RUN]", help="Id of a run, for details.", show_default=False)
+        str | None, typer.Argument(metavar="RUN", help="Id of a run, for details.", show_default=False)
     ] = None,
     url: Url = DEFAULT_URL,
     as_json: Json = False,
 ) -> None:
     """Show all runs and their verdicts, or one RUN in detail.
 
-    Exit codes: 0 shown, 1 something went wrong, 2 wrong usage, 7 the service cannot be reached, 8 no such run.
+    Exit codes: 0 shown, 1 something went wrong, 2 wrong usage, 7 service not reachable, 8 no such run.
     """
     with failures_end_with_codes(), Client(url) as client:
         if run is None:

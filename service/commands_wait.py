@@ -69,9 +69,9 @@ Ends when they have, when the run is closed or has failed, or after --timeout se
 0  settled: the run may stop
 1  something else went wrong (the message says what)
 2  wrong usage
-3  not settled yet: still unsettled or gathering at the timeout or at the close
-4  drifting at the timeout or at the close
-5  inseparable at the timeout or at the close: ask for another number of modes
+3  unsettled or gathering when the wait or the run ended
+4  drifting when the wait or the run ended
+5  inseparable when the wait or the run ended: ask for another number of modes
 6  the run has failed
 7  the service cannot be reached
 8  no such run

@@ -58,10 +58,14 @@ class Client:
         return Run(self._transport, self._transport.json("GET", f"/v1/runs/{quote(run_id, safe='')}"))
 
     def runs(self) -> list[Run]:
-        """All runs of the service, in its order."""
-        answer = self._transport.json("GET", "/v1/runs")
-        resources = answer["runs"] if isinstance(answer, dict) else answer
-        return [Run(self._transport, resource) for resource in resources]
+        """All runs of the service, newest first."""
+        found: list[Run] = []
+        page: str | None = "/v1/runs"
+        while page is not None:
+            answer = self._transport.json("GET", page)
+            found += [Run(self._transport, resource) for resource in answer["runs"]]
+            page = answer.get("next")
+        return found
 
     def close(self) -> None:
         """Give the connections back; runs and hooks made from this client end with it."""

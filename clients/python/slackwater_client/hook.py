@@ -152,16 +152,11 @@ class Hook:
 
     def close(self) -> None:
         """Send what is left, for at most ``flush_seconds``; warn of the rest, or raise if asked to."""
-        if self._closed:
+        if self._finish():
             return
-        self._closed = True
-        if self._filled:
-            self._hand_over()
-        self._outbox.finish(self._flush_seconds)
-        if self.unsent_snapshots or self.lost_snapshots:
-            if self._raise_errors:
-                raise UnsentError(self._account())
-            warnings.warn(UnsentWarning(self._account()), stacklevel=2)
+        if self._raise_errors:
+            raise UnsentError(self._account())
+        warnings.warn(UnsentWarning(self._account()), stacklevel=2)
 
     def __enter__(self) -> Hook:
         return self
@@ -169,7 +164,20 @@ class Hook:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        self.close()
+        if kind is None:
+            self.close()
+        elif not self._finish():
+            log.warning("%s", self._account())  # the error on its way out is the one to see
+
+    def _finish(self) -> bool:
+        """Send what is left and end the thread; True when all snapshots arrived, or when it was done before."""
+        if self._closed:
+            return True
+        self._closed = True
+        if self._filled:
+            self._hand_over()
+        self._outbox.finish(self._flush_seconds)
+        return not (self.unsent_snapshots or self.lost_snapshots)
 
     def _is_known(self, time: float | None) -> bool:
         """True for a step that the run holds already, as after a restart from an older solver checkpoint."""

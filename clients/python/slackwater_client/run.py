@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 Array = npt.NDArray[np.floating[Any]]
 
+SHORTEST_WATCH_SECONDS = 0.5  # no verdict changes faster than this in a way that matters
 LONGEST_HOLD_SECONDS = 20.0  # how long one request lets the service hold the answer; proxies often cut at 30
 
 
@@ -78,7 +79,7 @@ class Run:
         return self._resource
 
     def put_weights(self, weights: npt.ArrayLike) -> None:
-        """Give the point weights (cell volume or area), shape (n_points,), before the first batch."""
+        """Give weights (cell volume or area), (n_points,) or (n_fields, n_points), before the first batch."""
         self._transport.send_array("PUT", f"{self._path}/weights", NpyBody(weights))
 
     def put_positions(self, positions: npt.ArrayLike) -> None:
@@ -148,14 +149,19 @@ class Run:
         deadline = time.monotonic() + timeout
         held = 0.0
         while True:
+            asked = time.monotonic()
             report = with_patience(partial(self._held_convergence, held), patience_seconds)
             resource = with_patience(self.refresh, patience_seconds)
             over = str(resource["status"]) in OVER
-            if over and held > 0.0:  # what was read before the end may be older than the end
+            if over:  # what was read before the end may be older than the end
                 report = with_patience(self.convergence, patience_seconds)
             yield report
+            if over or report["verdict"]["state"] == "settled":
+                return
+            if held > 0.0:
+                _rest_of_a_moment(asked, deadline)
             held = min(hold, deadline - time.monotonic())
-            if over or report["verdict"]["state"] == "settled" or held <= 0.0:
+            if held <= 0.0:
                 return
 
     def _held_convergence(self, hold_seconds: float) -> ConvergenceReport:
@@ -164,9 +170,7 @@ class Run:
         if hold_seconds > 0.0:
             params = {"wait_for": "settled", "timeout": round(hold_seconds, 3)}
         path = f"{self._path}/convergence"
-        return cast(
-            ConvergenceReport, self._transport.json("GET", path, params=params, wait_seconds=hold_seconds)
-        )
+        return cast(ConvergenceReport, self._transport.json("GET", path, params=params, wait_seconds=hold_seconds))
 
     def modes(self, n: int | None = None) -> Array:
         """The leading modes, (n, n_fields, n_points), in field units and orthonormal under the weights."""
@@ -205,6 +209,12 @@ class Run:
 
 
 OVER = frozenset({"closed", "failed"})
+
+
+def _rest_of_a_moment(asked: float, deadline: float) -> None:
+    """Pause after an answer that came early, as from a service that is stopping, so as not to loop busily."""
+    end = min(asked + SHORTEST_WATCH_SECONDS, deadline)
+    time.sleep(max(0.0, end - time.monotonic()))
 
 
 def _time_parameters(times: npt.ArrayLike | None) -> Parameters | None:

@@ -101,18 +101,14 @@ def _parsed(response: httpx.Response) -> Any:
     try:
         return response.json()
     except ValueError as error:
-        raise SlackwaterError(
-            f"{response.url} did not answer with JSON; is it a Slackwater service?"
-        ) from error
+        raise SlackwaterError(f"{response.url} did not answer with JSON; is it a Slackwater service?") from error
 
 
 def _checked_url(url: str) -> str:
     try:
         parsed = httpx.URL(url)
     except httpx.InvalidURL as error:
-        raise ValueError(
-            f"{url!r} is not a URL ({error}); it should look like http://127.0.0.1:8350"
-        ) from error
+        raise ValueError(f"{url!r} is not a URL ({error}); it should look like http://127.0.0.1:8350") from error
     if parsed.scheme not in ("http", "https") or not parsed.host:
         raise ValueError(f"{url!r} is not an address of a service; it should look like http://127.0.0.1:8350")
     return url.rstrip("/")

@@ -22,6 +22,8 @@ if TYPE_CHECKING:
 
 Array = npt.NDArray[np.floating[Any]]
 
+MAX_TIMES_IN_QUERY = 1000  # about 30 kB of address; servers and proxies often end at 64 kB
+EVEN_FRACTION = 1e-6  # of a step: far above rounding, far below any jitter that a spectrum would show
 SHORTEST_WATCH_SECONDS = 0.5  # no verdict changes faster than this in a way that matters
 LONGEST_HOLD_SECONDS = 20.0  # how long one request lets the service hold the answer; proxies often cut at 30
 
@@ -101,7 +103,8 @@ class Run:
         snapshots : (n, n_fields, n_points), (n, n_fields * n_points) or (n, n_fields, *grid shape)
         sequence : number of the batch, from 0, without gaps. A repeat under the same number is harmless.
             Without it the service numbers the batch; tries within one call still count once.
-        times : (n,) in the time unit of the run; without them the declared time step holds
+        times : (n,) in the time unit of the run; without them the declared time step holds. More than 1000
+            must be evenly spaced.
         patience_seconds : how long to go on trying while the service is away, busy or full
 
         Raises
@@ -188,9 +191,11 @@ class Run:
         """Singular values, largest first, (r,)."""
         return self._transport.array(f"{self._path}/singular-values")
 
-    def coefficients(self) -> Array:
-        """Temporal coefficients."""
-        return self._transport.array(f"{self._path}/coefficients")
+    def coefficients(self, n: int | None = None) -> tuple[Array, Array]:
+        """Times (N,) and temporal coefficients (N, n) of the leading modes, one row for each snapshot."""
+        values = self._transport.array(f"{self._path}/coefficients", {"n": n} if n is not None else None)
+        times = self._transport.array(f"{self._path}/times")
+        return times[: len(values)], values  # snapshots may have come in between
 
     def close(self) -> ConvergenceReport:
         """Say that no more data will come; what waits is still taken in, then the verdict is final."""
@@ -223,4 +228,12 @@ def _time_parameters(times: npt.ArrayLike | None) -> Parameters | None:
     values = np.asarray(times, dtype=np.float64)
     if values.ndim != 1 or not np.isfinite(values).all():
         raise ValueError(f"times must be finite and of shape (n,), got shape {values.shape}: {values}")
-    return {"time": values.tolist()}
+    if len(values) <= MAX_TIMES_IN_QUERY:
+        return {"time": values.tolist()}
+    step = float(values[-1] - values[0]) / (len(values) - 1)
+    even = values[0] + step * np.arange(len(values))
+    if np.abs(values - even).max() > EVEN_FRACTION * abs(step):
+        raise ValueError(
+            f"{len(values)} uneven times are too many for one request; post at most {MAX_TIMES_IN_QUERY} at once"
+        )
+    return {"start_time": float(values[0]), "time_step": step}

@@ -1,6 +1,6 @@
-"""Checkpoints: an immutable zarr v3 group with the results for readers and the state for going on.
+"""Checkpoints: immutable directories of one zarr v3 group, with the results for readers and the state for going on.
 
-The root group holds what people read (modes, mean, energies, coefficients, with named dimensions and units, for any
+A manifest of digests lies beside the group ``fields.zarr``. The root of the group holds what people read (modes, mean, energies, coefficients, with named dimensions and units, for any
 reader of the format); the group ``state`` holds the exact arrays from which a stream goes on bit for bit.
 """
 
@@ -25,6 +25,7 @@ if TYPE_CHECKING:
 Numbers = npt.NDArray[Any]
 
 VERSION = 1
+STORE = "fields.zarr"  # the group, beside the manifest that guards it
 CHUNK_BYTES = 16 * 1024**2  # a chunk costs about a millisecond to write, whatever its size
 MIN_MODES = 10  # modes written for readers: at least these, or twice the wanted ones; all are in the state
 AXES = "zyx"
@@ -33,7 +34,7 @@ AXES = "zyx"
 def save_checkpoint(stream: SnapshotStream, path: Path) -> None:
     """Write results and state of a stream to a new directory, whole or not at all."""
     with whole_directory(path) as folder:
-        root = zarr.open_group(folder, mode="w-", zarr_format=3)
+        root = zarr.open_group(folder / STORE, mode="w-", zarr_format=3)
         root.attrs.update(_root_attributes(stream))
         if stream.n_applied:
             _write_results(root, stream)
@@ -50,7 +51,7 @@ def read_state(path: Path) -> tuple[dict[str, Any], dict[str, Numbers]]:
     """
     check_manifest(path)
     try:
-        root = zarr.open_group(path, mode="r", zarr_format=3)
+        root = zarr.open_group(path / STORE, mode="r", zarr_format=3)
         state = root["state"]
         if not isinstance(state, zarr.Group):
             raise TypeError("state is not a group")

@@ -32,14 +32,18 @@ def hidden_structure(modal: ModalMoments, n_modes: int, confidence: float = 0.95
 
     Notes
     -----
-    For a part without structure the covariance of the probes is about (outside energy) times the identity. A
-    single direction v of energy e adds e (Omega v)(Omega v)', an eigenvalue of about p e over that floor, with
-    |Omega v|^2 spread like chi-square with p degrees of freedom.
+    A part without structure in m' directions gives the probes a Marchenko-Pastur spectrum of ratio p / m' about
+    the outside energy t: mean t, relative variance p / m', upper edge t (1 + (p / m')^(1/2))^2. A single direction v
+    of energy e adds e (Omega v)(Omega v)', an eigenvalue p e with |Omega v|^2 spread like chi-square with p degrees
+    of freedom. Mean and variance come from all eigenvalues but the largest.
     """
     n_probes = len(modal.outside)
+    if n_probes < 3:
+        return Hidden(0.0, 0.0, 0.0)
     values = np.linalg.eigvalsh(modal.outside)
-    floor = float(values[:-1].mean()) if n_probes > 1 else 0.0
-    energy = max(float(values[-1]) - floor, 0.0) / max(n_probes, 1)
+    mean, variance = float(values[:-1].mean()), float(values[:-1].var())
+    edge = (np.sqrt(mean) + np.sqrt(variance / mean)) ** 2 if mean > 0 else 0.0
+    energy = max(float(values[-1]) - edge, 0.0) / n_probes
     wanted = modal.eigenvalues[: max(1, min(n_modes, modal.rank))]
-    bound = energy * n_probes / float(chi2.ppf(1.0 - confidence, n_probes)) if n_probes else 0.0
-    return Hidden(energy, bound, DANGEROUS_SHARE * float(wanted.min(initial=np.inf if len(wanted) else 0.0)))
+    bound = energy * n_probes / float(chi2.ppf(1.0 - confidence, n_probes))
+    return Hidden(energy, bound, DANGEROUS_SHARE * float(wanted[-1]))

@@ -104,7 +104,7 @@ def modal_moments(moments: Moments, n_leading: int) -> ModalMoments:
         residuals=whole[:rank, rank:],
         n_snapshots=moments.n_snapshots,
         total_energy=max(float(moments.energies.sum()) / moments.n_snapshots - moments.mean_energy, 0.0),
-        block_energies=moments.energies / moments.counts,
+        block_energies=moments.block_energies(),
     )
 
 

@@ -71,7 +71,7 @@ def _startup_series(moments: Moments, n_modes: int) -> Array:
     n = min(n_modes, moments.rank)
     variances = np.einsum("bii->bi", moments.scatters[:, :n, :n]) / moments.counts[:, None]
     return np.concatenate(
-        [(moments.energies / moments.counts)[:, None], variances, moments.means[:, :n]], axis=1
+        [moments.block_energies()[:, None], variances, moments.means[:, :n]], axis=1
     )
 
 

@@ -139,7 +139,8 @@ class SnapshotStream:
         """Apply the snapshots that wait for a full block, and take no more."""
         if self.n_waiting:
             self._apply_block()
-        if self.n_applied and not self.closed:
+        looked = self._plan.looks[-1].n_snapshots if self._plan.looks else 0
+        if self.n_applied > looked:
             self._look()
         self.closed = True
 

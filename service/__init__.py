@@ -1,0 +1,1 @@
+"""The HTTP service around ``streaming``: durable intake, one worker thread, readers that never wait for it."""

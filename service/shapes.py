@@ -1,0 +1,95 @@
+"""What a body must be for a given declaration: decided from its header, and each value checked as it comes."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from service.npy import ArrayHeader
+from service.problems import Problem
+from streaming.declaration import RunDeclaration
+from streaming.intake import accepted_shapes
+
+
+@dataclass(frozen=True)
+class Expected:
+    """One kind of body: ``check`` raises the problem of a header that does not fit, ``place`` names a value.
+
+    ``dtype`` is the type in which the values must be finite.
+    """
+
+    what: str
+    dtype: np.dtype[Any]
+    check: Callable[[ArrayHeader], None]
+    place: Callable[[ArrayHeader, int], dict[str, Any]]
+
+
+def expect_batch(declaration: RunDeclaration, max_snapshots: int) -> Expected:
+    """A batch of snapshots."""
+
+    def check(header: ArrayHeader) -> None:
+        _check_batch(header, declaration, max_snapshots)
+
+    def place(header: ArrayHeader, index: int) -> dict[str, Any]:
+        snapshot, row = divmod(index, declaration.n_rows)
+        field, point = divmod(row, declaration.n_points)
+        return {"snapshot": snapshot, "field": declaration.fields[field].name, "point": point}
+
+    return Expected("batch", declaration.real_dtype, check, place)
+
+
+def expect_weights(declaration: RunDeclaration) -> Expected:
+    """One weight for each point, or for each field and point."""
+    wanted = [(declaration.n_points,), (len(declaration.fields), declaration.n_points)]
+    return Expected("weights", np.dtype(np.float64), _one_of("weights", wanted), _index)
+
+
+def expect_positions(declaration: RunDeclaration) -> Expected:
+    """One to three coordinates for each scattered point."""
+    if declaration.grid.kind != "points":
+        raise Problem(
+            "wrong-shape",
+            f"positions belong to a run whose grid is of kind points, this one is {declaration.grid.kind}",
+        )
+    wanted = [(declaration.n_points, axes) for axes in (1, 2, 3)]
+    return Expected("positions", np.dtype(np.float64), _one_of("positions", wanted), _index)
+
+
+def _check_batch(header: ArrayHeader, declaration: RunDeclaration, max_snapshots: int) -> None:
+    wanted, shape = accepted_shapes(declaration), header.shape
+    if len(shape) < 2 or shape[1:] not in wanted:
+        texts = " or ".join(f"[n_snapshots, {', '.join(map(str, one))}]" for one in wanted)
+        names = ", ".join(field.name for field in declaration.fields)
+        raise Problem(
+            "wrong-shape",
+            f"the batch has shape {list(shape)}; this run takes {texts}, fields in the order {names}",
+            got=list(shape),
+        )
+    if shape[0] < 1:
+        raise Problem("wrong-shape", "the batch holds no snapshots; send at least one", got=list(shape))
+    if shape[0] > max_snapshots:
+        raise Problem(
+            "body-too-large",
+            f"the batch holds {shape[0]} snapshots, at most {max_snapshots} are taken in one; send fewer",
+            limit=max_snapshots,
+        )
+
+
+def _one_of(what: str, wanted: list[tuple[int, ...]]) -> Callable[[ArrayHeader], None]:
+    def check(header: ArrayHeader) -> None:
+        if header.shape not in wanted:
+            texts = " or ".join(str(list(shape)) for shape in wanted)
+            raise Problem(
+                "wrong-shape",
+                f"{what} have shape {list(header.shape)}; this run takes {texts}",
+                got=list(header.shape),
+            )
+
+    return check
+
+
+def _index(header: ArrayHeader, index: int) -> dict[str, Any]:
+    return {"index": [int(k) for k in np.unravel_index(index, header.shape)]}

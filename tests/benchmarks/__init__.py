@@ -1,0 +1,1 @@
+"""Speed, measured beside its references in one run: ``python -m tests.benchmarks``."""

@@ -1,0 +1,132 @@
+"""Print the table of speeds: ``python -m tests.benchmarks [--rows 1e6] [--rank 32]``.
+
+Each figure is a median over repeats, and each ratio is taken within one run, since machines drift.
+"""
+
+from __future__ import annotations
+
+import argparse
+import statistics
+import time
+from collections.abc import Callable, Iterator
+
+import numpy as np
+from rich.console import Console
+from rich.table import Table
+
+from streaming import SnapshotStream
+
+Row = tuple[str, str, str, str]
+
+
+def main() -> None:
+    """Measure, and print a table."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--rows", type=float, default=1e6, help="rows of a snapshot, m")
+    parser.add_argument("--rank", type=int, default=32, help="retained rank, R")
+    parser.add_argument("--dtypes", nargs="+", default=["float32", "float64"])
+    chosen = parser.parse_args()
+    table = Table(title=f"Update at m = {chosen.rows:g}, R = {chosen.rank}, blocks of {2 * chosen.rank}")
+    for heading in ("measured", "value", "reference", "ratio"):
+        table.add_column(heading)
+    console = Console()
+    for dtype in chosen.dtypes:
+        console.print(f"measuring {dtype} ...", style="dim")
+        for row in update_rows(int(chosen.rows), chosen.rank, dtype):
+            table.add_row(*row)
+    console.print("measuring a long record ...", style="dim")
+    table.add_row(*long_record_row())
+    console.print(table)
+
+
+def update_rows(n_rows: int, rank: int, dtype: str) -> Iterator[Row]:
+    """Snapshots per second of the update beside IncrementalPCA, and its flop rate beside the square GEMM."""
+    batches = structured_batches(n_rows, 2 * rank, dtype)
+    gemm = gemm_rate(dtype)
+    ours = update_rate(n_rows, rank, dtype, batches)
+    theirs = incremental_pca_rate(rank, batches)
+    flops = 9 * n_rows * rank * ours
+    yield (f"update, {dtype}", f"{ours:.0f} snapshots/s", f"IncrementalPCA {theirs:.2f}/s", f"{ours / theirs:.0f} x")
+    yield (
+        f"same, by 9 m R flops, {dtype}",
+        f"{flops / 1e9:.0f} Gflop/s",
+        f"square GEMM {gemm / 1e9:.0f} Gflop/s",
+        f"{100 * flops / gemm:.0f} %",
+    )
+
+
+def structured_batches(n_rows: int, length: int, dtype: str) -> list[np.ndarray]:
+    """Two batches of eight decaying structures in noise."""
+    rng = np.random.default_rng(0)
+    structures = rng.standard_normal((8, n_rows)).astype(dtype)
+    out = []
+    for _ in range(2):
+        amplitudes = (rng.standard_normal((length, 8)) * 2.0 ** -np.arange(8)).astype(dtype)
+        noise = rng.standard_normal((length, n_rows), dtype=np.dtype(dtype)) * np.asarray(0.3, dtype)
+        out.append(amplitudes @ structures + noise)
+    return out
+
+
+def update_rate(n_rows: int, rank: int, dtype: str, batches: list[np.ndarray], repeats: int = 7) -> float:
+    """Snapshots per second of `SnapshotStream.absorb`, looks included as they fall due."""
+    stream = SnapshotStream(plain_declaration(n_rows, rank, dtype))
+    stream.absorb(batches[0])
+    stream.absorb(batches[1])
+    seconds = [elapsed(lambda k=k: stream.absorb(batches[k % 2])) for k in range(repeats)]
+    return len(batches[0]) / statistics.median(seconds)
+
+
+def incremental_pca_rate(rank: int, batches: list[np.ndarray]) -> float:
+    """Snapshots per second of scikit-learn's IncrementalPCA on the same batches, from its second one on."""
+    from sklearn.decomposition import IncrementalPCA
+
+    model = IncrementalPCA(n_components=rank)
+    model.partial_fit(batches[0][: 2 * rank])
+    return len(batches[1]) / elapsed(lambda: model.partial_fit(batches[1]))
+
+
+def gemm_rate(dtype: str, size: int = 4096, repeats: int = 5) -> float:
+    """Flops per second of a square matrix product with all threads."""
+    left = np.random.default_rng(1).standard_normal((size, size)).astype(dtype)
+    right = left.copy()
+    left @ right
+    return 2.0 * size**3 / statistics.median(elapsed(lambda: left @ right) for _ in range(repeats))
+
+
+def long_record_row(n_rows: int = 2000, rank: int = 16, n_snapshots: int = 100_000) -> Row:
+    """Time per block around snapshot 100,000 against 1,000, small m; looks left out, they are geometrically rare."""
+    stream = SnapshotStream(plain_declaration(n_rows, rank, "float32"))
+    batches = structured_batches(n_rows, 2 * rank, "float32")
+    window = 200 * 2 * rank
+    times: dict[int, float] = {}
+    for start in range(0, n_snapshots, 2 * rank):
+        looks = len(stream.history)
+        seconds = elapsed(lambda k=start: stream.absorb(batches[(k // (2 * rank)) % 2]))
+        if len(stream.history) == looks:
+            times[start] = seconds
+    early = statistics.median(s for k, s in times.items() if 1000 <= k < 1000 + window)
+    late = statistics.median(s for k, s in times.items() if k >= n_snapshots - window)
+    return ("block at snapshot 100,000", f"{1e3 * late:.2f} ms", f"at 1,000 {1e3 * early:.2f} ms", f"{late / early:.2f} x")
+
+
+def plain_declaration(n_rows: int, rank: int, dtype: str) -> dict[str, object]:
+    """A run with one field and nothing special."""
+    return {
+        "name": "benchmark",
+        "n_points": n_rows,
+        "fields": [{"name": "u"}],
+        "dtype": dtype,
+        "retained_rank": rank,
+        "criterion": {"n_modes": 4},
+    }
+
+
+def elapsed(work: Callable[[], object]) -> float:
+    """Wall seconds of one call."""
+    start = time.perf_counter()
+    work()
+    return time.perf_counter() - start
+
+
+if __name__ == "__main__":
+    main()

@@ -1,18 +1,20 @@
-"""A relay in front of the service that loses receipts: the request goes through, the answer does not."""
+"""A relay in front of the service: it loses receipts when asked to, and seems dead once it is closed."""
 
 from __future__ import annotations
 
+import contextlib
 import socket
 import threading
 
 
 class CuttingProxy:
-    """Relays connections to ``target_port``; cuts the first ``n_cuts`` answers to a PUT."""
+    """Relays connections to ``target_port``; the answers to the first ``n_cuts`` PUTs never arrive."""
 
-    def __init__(self, target_port: int, n_cuts: int) -> None:
+    def __init__(self, target_port: int, n_cuts: int = 0) -> None:
         self._target_port = target_port
         self._cuts_left = n_cuts
         self.n_cut = 0
+        self._open: list[socket.socket] = []
         self._lock = threading.Lock()
         self._listener = socket.create_server(("127.0.0.1", 0))
         self.url = f"http://127.0.0.1:{self._listener.getsockname()[1]}"
@@ -20,9 +22,12 @@ class CuttingProxy:
         self._thread.start()
 
     def close(self) -> None:
-        self._listener.shutdown(socket.SHUT_RDWR)
+        """Refuse new connections and cut those that are open."""
+        _shut(self._listener)
         self._listener.close()
         self._thread.join(5.0)
+        for connection in self._open:
+            _shut(connection)
 
     def _accept(self) -> None:
         while True:
@@ -30,6 +35,7 @@ class CuttingProxy:
                 client, _ = self._listener.accept()
             except OSError:
                 return
+            self._open.append(client)
             threading.Thread(target=self._relay, args=(client,), daemon=True).start()
 
     def _relay(self, client: socket.socket) -> None:
@@ -42,7 +48,7 @@ class CuttingProxy:
                 if cutting.is_set():
                     cutting.clear()
                     self.n_cut += 1
-                    client.shutdown(socket.SHUT_RDWR)
+                    _shut(client)
                     return
                 client.sendall(answer)
 
@@ -53,6 +59,11 @@ class CuttingProxy:
                     self._cuts_left -= 1
                     cutting.set()
             server.sendall(request)
+
+
+def _shut(connection: socket.socket) -> None:
+    with contextlib.suppress(OSError):  # ended already
+        connection.shutdown(socket.SHUT_RDWR)
 
 
 def _received(connection: socket.socket) -> bytes:

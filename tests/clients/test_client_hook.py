@@ -169,11 +169,12 @@ def test_a_refused_batch_leaves_no_gap(
 
 
 @pytest.fixture
-def orphan(own_service: Service, declaration: dict[str, Any]) -> Iterator[Run]:
-    """A run whose service has died."""
-    with Client(own_service.url, timeout=2.0) as client:
+def orphan(service: Service, declaration: dict[str, Any]) -> Iterator[Run]:
+    """A run whose service is gone: nothing answers at its address any more."""
+    relay = CuttingProxy(service.port)
+    with Client(relay.url, timeout=2.0) as client:
         run = client.declare(declaration)
-        own_service.kill()
+        relay.close()
         yield run
 
 

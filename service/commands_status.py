@@ -6,6 +6,7 @@ import json
 from typing import Annotated, Any
 
 import typer
+from rich import box
 from rich.console import Console, Group
 from rich.table import Table
 from rich.text import Text
@@ -20,13 +21,14 @@ from service.verdict_text import (
     max_angle_of,
     modes_table,
     number_lines,
-    to_go,
+    two_digits,
     worst_group,
 )
 from slackwater_client import Client, ConvergenceReport, Run
 
 # Each run costs a request, and no terminal shows more at once.
 MAX_LISTED_RUNS = 100
+PLAIN_WIDTH = 160
 
 
 def status(
@@ -52,7 +54,7 @@ def _show_one(run: Run, as_json: bool) -> None:
     if as_json:
         print(json.dumps({"run": run.resource, "convergence": report}, indent=2))
         return
-    Console().print(_detail(run, report))
+    _console().print(_detail(run, report))
 
 
 def _show_all(client: Client, as_json: bool) -> None:
@@ -62,31 +64,37 @@ def _show_all(client: Client, as_json: bool) -> None:
         listed: list[dict[str, Any]] = [{"run": run.resource, "verdict": it["verdict"]} for run, it in rows]
         print(json.dumps({"runs": listed, "left_out": len(runs) - len(rows)}, indent=2))
         return
-    console = Console()
+    console = _console()
     console.print(_overview(rows) if rows else f"no runs at {client.url}")
     if len(runs) > len(rows):
         console.print(f"{len(runs) - len(rows)} more runs are not shown")
 
 
+def _console() -> Console:
+    """Standard output; in a file or a pipe, wide enough that nothing is cut."""
+    console = Console()
+    return console if console.is_terminal else Console(width=max(console.width, PLAIN_WIDTH))
+
+
 def _overview(rows: list[tuple[Run, ConvergenceReport]]) -> Table:
     """One row for each run: is it settled, what holds it back, how long to go."""
-    table = Table()
-    for heading in ("run", "name", "status", "verdict", "snapshots", "bound / tolerance", "held by", "to go"):
+    table = Table(box=box.SIMPLE, pad_edge=False, padding=0)
+    for heading in ("run", "verdict", "snapshots", "bound, deg", "to go", "held by"):
         table.add_column(
-            heading, justify="right" if heading in ("snapshots", "bound / tolerance") else "left"
+            heading, justify="right" if heading in ("snapshots", "bound, deg", "to go") else "left", no_wrap=True
         )
     for run, report in rows:
         state, worst = report["verdict"]["state"], worst_group(report["groups"])
-        tolerance = max_angle_of(run.declaration)
+        status, forecast = str(run.resource["status"]), report["verdict"]["snapshots_to_go"]
+        shown = "failed" if status == "failed" else state
+        ending = "" if status in ("open", "failed") else f", {status}"
         table.add_row(
             run.id,
-            Text(run.name),
-            str(run.resource["status"]),
-            Text(state, style=STYLE_OF_STATE.get(state, "")),
+            Text(shown + ending, style=STYLE_OF_STATE.get(shown, "")),
             f"{report['n_snapshots']:,}",
-            f"{angle(worst['angle_bound_deg'])} / {tolerance:g} deg" if worst else "-",
+            f"{angle(worst['angle_bound_deg'])} of {max_angle_of(run.declaration):g}" if worst else "-",
+            two_digits(forecast["estimate"]) if forecast and state != "settled" else "-",
             group_name(worst) if worst and not worst["settled"] else "-",
-            to_go(report) or "-",
         )
     return table
 
@@ -96,7 +104,7 @@ def _detail(run: Run, report: ConvergenceReport) -> Group:
     tolerance, state = max_angle_of(run.declaration), report["verdict"]["state"]
     parts: list[Any] = [
         Text(f"{run.name} ({run.id}), {run.resource['status']}"),
-        Text(headline(report, tolerance), style=STYLE_OF_STATE.get(state, "")),
+        Text(headline(report, run.declaration), style=STYLE_OF_STATE.get(state, "")),
     ]
     if run.resource.get("reason"):
         parts.append(Text(f"failed: {run.resource['reason']}", style=STYLE_OF_STATE["failed"]))

@@ -11,8 +11,9 @@ from typing import Annotated, Any
 
 import typer
 from rich.console import Console
+from rich.text import Text
 
-from service.verdict_text import STYLE_OF_STATE, headline, max_angle_of
+from service.verdict_text import STYLE_OF_STATE, headline
 from slackwater_client import (
     Client,
     ConvergenceReport,
@@ -130,12 +131,12 @@ wait.__doc__ = WAIT_HELP
 def _followed(run: Run, timeout: float, patience: float, show: bool) -> ConvergenceReport:
     """Show each report as it comes and give the last: one live line on a terminal, plain lines elsewhere."""
     console = Console(stderr=True, quiet=not show)
-    tolerance, shown = max_angle_of(run.declaration), ""
+    shown = ""
     with console.status("waiting for the first report") as live:
         for report in run.watch(timeout, patience_seconds=patience, hold=WATCH_SECONDS):
-            line = headline(report, tolerance)
+            line = headline(report, run.declaration)
             style = STYLE_OF_STATE.get(report["verdict"]["state"], "")
-            live.update(f"{run.name}: {line}" if not style else f"{run.name}: [{style}]{line}[/]")
+            live.update(Text.assemble(f"{run.name}: ", (line, style)))
             if not console.is_terminal and line != shown:
                 console.print(f"{run.name}: {line}", soft_wrap=True, markup=False, highlight=False)
             shown = line
@@ -145,7 +146,7 @@ def _followed(run: Run, timeout: float, patience: float, show: bool) -> Converge
 def _last_words(run: Run, report: ConvergenceReport) -> str:
     """The verdict and its reasons, for standard output."""
     resource = run.resource
-    lines = [f"{run.name}: {headline(report, max_angle_of(run.declaration))}"]
+    lines = [f"{run.name}: {headline(report, run.declaration)}"]
     if resource["status"] == "failed":
         lines = [f"{run.name}: failed: {resource.get('reason') or 'no reason given'}"]
     lines += [f"  {reason['text']}" for reason in report["verdict"]["reasons"]]

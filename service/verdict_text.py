@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from typing import Any
 
+from rich import box
 from rich.table import Table
 
 from slackwater_client import ConvergenceReport, GroupReport
@@ -19,14 +20,14 @@ STYLE_OF_STATE = {
 }
 
 
-def headline(report: ConvergenceReport, max_angle_deg: float) -> str:
+def headline(report: ConvergenceReport, declaration: Mapping[str, Any]) -> str:
     """State, snapshots, the bound that holds it back against its tolerance, and the forecast, in one line."""
     parts = [report["verdict"]["state"], f"{report['n_snapshots']:,} snapshots"]
     worst = worst_group(report["groups"])
     if worst is not None:
-        bound = angle(worst["angle_bound_deg"])
-        parts.append(f"bound {bound} of {max_angle_deg:g} deg for {group_name(worst)}")
-    parts.append(to_go(report))
+        bound, tolerance = angle(worst["angle_bound_deg"]), max_angle_of(declaration)
+        parts.append(f"bound {bound} of {tolerance:g} deg for {group_name(worst)}")
+    parts.append(to_go(report, str(declaration["time"]["unit"])))
     return " · ".join(part for part in parts if part)
 
 
@@ -41,12 +42,19 @@ def group_name(group: GroupReport) -> str:
     return f"mode {first}" if first == last else f"modes {first}-{last}"
 
 
-def to_go(report: ConvergenceReport) -> str:
+def to_go(report: ConvergenceReport, time_unit: str) -> str:
     """The forecast in words; empty when there is none or nothing is left to do."""
     forecast = report["verdict"]["snapshots_to_go"]
     if forecast is None or report["verdict"]["state"] == "settled":
         return ""
-    return f"about {forecast['estimate']:,} to go ({forecast['low']:,} to {forecast['high']:,})"
+    estimate, low, high = (two_digits(forecast[name]) for name in ("estimate", "low", "high"))
+    span = forecast.get("time")
+    return f"about {estimate} to go ({low} to {high})" + (f", {span:.2g} {time_unit}" if span else "")
+
+
+def two_digits(count: int) -> str:
+    """A forecast count to the two digits it is worth: 8,361 is 8,400."""
+    return f"{int(float(f'{count:.2g}')):,}"
 
 
 def angle(value_deg: float | None) -> str:
@@ -56,7 +64,7 @@ def angle(value_deg: float | None) -> str:
 
 def groups_table(report: ConvergenceReport, max_angle_deg: float) -> Table:
     """One row for each group of modes: is it settled, and by how much."""
-    table = Table(title=f"Groups of modes, tolerance {max_angle_deg:g} deg", title_justify="left")
+    table = Table(title=f"Groups of modes, tolerance {max_angle_deg:g} deg", title_justify="left", box=box.SIMPLE)
     for heading in ("modes", "expected, deg", "bound, deg", "truncation, deg", "energy +/-", "settled"):
         table.add_column(heading, justify="right" if heading != "settled" else "left")
     for group in report["groups"]:
@@ -73,7 +81,7 @@ def groups_table(report: ConvergenceReport, max_angle_deg: float) -> Table:
 
 def modes_table(report: ConvergenceReport) -> Table:
     """One row for each mode: its share of the energy with the interval, and its peak."""
-    table = Table(title="Modes", title_justify="left")
+    table = Table(title="Modes", title_justify="left", box=box.SIMPLE)
     for heading in ("mode", "share of energy", "low", "high", "peak frequency", "Strouhal"):
         table.add_column(heading, justify="right")
     for mode in report["modes"]:
@@ -102,7 +110,7 @@ def number_lines(report: ConvergenceReport, time_unit: str) -> list[str]:
     return lines + [f"because: {reason['text']}" for reason in report["verdict"]["reasons"]]
 
 
-def max_angle_of(declaration: dict[str, Any]) -> float:
+def max_angle_of(declaration: Mapping[str, Any]) -> float:
     """The declared tolerance, degrees."""
     return float(declaration["criterion"]["max_angle_deg"])
 

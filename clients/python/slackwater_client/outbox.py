@@ -133,7 +133,10 @@ class Outbox:
                 receipt = self._post(batch, sequence)
             except SlackwaterError as error:
                 attempt = self._failed(batch, error, attempt)
-            except Exception as error:  # a fault of this package must not end in silence
+            except Exception as error:
+                if self._ended:  # the client was closed under a request that outlasted the flush
+                    return
+                # a fault of this package must not end in silence
                 log.exception("posting failed in an unforeseen way; nothing more is sent")
                 self._stop(SlackwaterError(f"posting failed in an unforeseen way: {error!r}"))
             else:

@@ -2,17 +2,12 @@
 
 from __future__ import annotations
 
-from typing import Literal
-
 from pydantic import Field, JsonValue
 
-from service.board import Published
-from service.records import Backlog, BatchRecord, RunRecord
+from service.board import Advice, Published
+from service.records import Backlog, BatchRecord, RunRecord, Status
 from streaming.declaration import Criterion, Model, Name, RunDeclaration
 from streaming.report import Convergence, Reason, State, Stationarity, Verdict
-
-Status = Literal["open", "closing", "closed", "failed"]
-Advice = Literal["continue", "may stop"]
 
 
 class Waiting(Model):

@@ -169,11 +169,11 @@ class Applier:
             self._record(report, before.verdict)
         if stream.n_applied not in (0, *self._shelf.numbers):
             self._shelf.save(stream)
-        self._place.registry.set_status(self.run_id, "closed")
+        self._place.board.put(self.run_id, value)
         self._shelf.tidy(closed=True)
         self.release()
         self._folder.record.unlink(missing_ok=True)
-        self._place.board.put(self.run_id, value)
+        self._place.registry.set_status(self.run_id, "closed")
 
     def release(self) -> None:
         """Let go of the stream; what was applied since the last checkpoint is replayed when it is needed again."""

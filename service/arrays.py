@@ -46,7 +46,8 @@ def json_text(values: npt.NDArray[Any]) -> str:
             f"{values.size} values are too many for JSON (at most {MAX_JSON_VALUES}); ask for {NPY}",
         )
     finite = np.isfinite(values)
-    plain = values if finite.all() else np.where(finite, values.astype(object), None)
+    plain = values.astype(object)
+    plain[~finite] = None
     return json.dumps({"shape": list(values.shape), "values": plain.tolist()}, allow_nan=False)
 
 

@@ -6,8 +6,11 @@ import asyncio
 import hashlib
 import threading
 from dataclasses import dataclass, replace
+from typing import Literal
 
 from streaming.report import Convergence, State
+
+Advice = Literal["continue", "may stop"]
 
 
 @dataclass(frozen=True)
@@ -22,7 +25,7 @@ class Published:
     snapshots_to_go: dict[str, float | int | None] | None = None
 
     @property
-    def advice(self) -> str:
+    def advice(self) -> Advice:
         return "may stop" if self.verdict is State.SETTLED else "continue"
 
     @property

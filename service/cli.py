@@ -8,6 +8,7 @@ fix_blas_threads()  # before anything below imports numpy
 
 import importlib  # noqa: E402
 import logging  # noqa: E402
+from collections.abc import Mapping  # noqa: E402
 from importlib.metadata import version  # noqa: E402
 from pathlib import Path  # noqa: E402
 from typing import Annotated  # noqa: E402
@@ -70,7 +71,7 @@ def serve_command(
     run_service(flags, config)
 
 
-def run_service(flags: dict[str, object], config: Path | None) -> None:
+def run_service(flags: Mapping[str, object], config: Path | None) -> None:
     """Open the service and serve; what prevents it is said in one line, with exit code 1."""
     from pydantic import ValidationError
 

@@ -6,12 +6,14 @@ import json
 import sqlite3
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 import numpy.typing as npt
 
 from streaming.declaration import RunDeclaration
+
+Status = Literal["open", "closing", "closed", "failed"]
 
 
 @lru_cache(maxsize=256)
@@ -26,7 +28,7 @@ class RunRecord:
     id: str
     declaration_text: str
     created: str
-    status: str
+    status: Status
     reason: str | None
     next_sequence: int
     next_snapshot: int
@@ -101,7 +103,7 @@ def run_from(row: tuple[Any, ...]) -> RunRecord:
 
 
 def batch_from(row: tuple[Any, ...]) -> BatchRecord:
-    return BatchRecord(*row[:-1], pruned=bool(row[-1]))
+    return BatchRecord(*(*row[:-1], bool(row[-1])))
 
 
 def event_from(row: tuple[Any, ...]) -> Event:

@@ -153,13 +153,16 @@ class Registry:
         with self.transaction() as db:
             db.executemany("DELETE FROM checkpoints WHERE run = ? AND n_snapshots = ?", [(run_id, n) for n in numbers])
 
-    def mark_pruned(self, run_id: str, covered_snapshots: int) -> list[int]:
-        """Mark the batches that lie wholly before ``covered_snapshots``; return their sequence numbers."""
+    def mark_pruned(self, run_id: str, covered_snapshots: int, left_out: bool) -> list[int]:
+        """Mark the batches that lie wholly before ``covered_snapshots``; return their sequence numbers.
+
+        With ``left_out`` also those that wait behind a gap, which the user has left out at close.
+        """
         with self.transaction() as db:
             rows = db.execute(
-                "SELECT sequence FROM batches WHERE run = ? AND pruned = 0 AND first_snapshot IS NOT NULL "
-                "AND first_snapshot + n_snapshots <= ?",
-                (run_id, covered_snapshots),
+                "SELECT sequence FROM batches WHERE run = ?1 AND pruned = 0 "
+                "AND (first_snapshot + n_snapshots <= ?2 OR (first_snapshot IS NULL AND ?3))",
+                (run_id, covered_snapshots, left_out),
             ).fetchall()
             db.executemany(
                 "UPDATE batches SET pruned = 1 WHERE run = ? AND sequence = ?", [(run_id, n) for (n,) in rows]

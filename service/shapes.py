@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -78,7 +78,7 @@ def _check_batch(header: ArrayHeader, declaration: RunDeclaration, max_snapshots
         )
 
 
-def _one_of(what: str, wanted: list[tuple[int, ...]]) -> Callable[[ArrayHeader], None]:
+def _one_of(what: str, wanted: Sequence[tuple[int, ...]]) -> Callable[[ArrayHeader], None]:
     def check(header: ArrayHeader) -> None:
         if header.shape not in wanted:
             texts = " or ".join(str(list(shape)) for shape in wanted)

@@ -63,7 +63,7 @@ class Shelf:
             self._registry.drop_checkpoints(self._run_id, surplus)
             for number in surplus:
                 shutil.rmtree(self._folder.checkpoint(number), ignore_errors=True)
-        for sequence in self._registry.mark_pruned(self._run_id, covered_snapshots(numbers, closed)):
+        for sequence in self._registry.mark_pruned(self._run_id, covered_snapshots(numbers, closed), closed):
             self._folder.batch(sequence).unlink(missing_ok=True)
 
     def load(self, declaration: RunDeclaration) -> SnapshotStream:

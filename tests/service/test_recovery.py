@@ -1,0 +1,179 @@
+"""What was acknowledged survives any end of the process, and counts once; damage is named, never hidden."""
+
+from __future__ import annotations
+
+import signal
+import subprocess
+import sys
+import threading
+import time
+from pathlib import Path
+
+import httpx
+import numpy as np
+import pytest
+
+from streaming import SnapshotStream
+from tests.service.serving import RunningService, check_problem, declaration, snapshots
+
+BATCH = 7
+
+
+def unbroken(n: int) -> SnapshotStream:
+    stream = SnapshotStream(declaration())
+    stream.absorb(snapshots(0, n))
+    stream.close()
+    return stream
+
+
+def post(service: RunningService, run: str, sequences: range) -> None:
+    for sequence in sequences:
+        answer = service.put(run, sequence, snapshots(sequence * BATCH, (sequence + 1) * BATCH))
+        assert answer.status_code in (200, 201), answer.text
+
+
+def check_same(service: RunningService, run: str, n: int) -> None:
+    """Close the run; everything is bitwise as if it had never been broken."""
+    closed = service.client.post(f"/v1/runs/{run}/close").json()
+    assert closed["status"] == "closed", closed
+    assert closed["n_applied"] == n
+    direct = unbroken(n)
+    modes = service.array(f"/v1/runs/{run}/modes")
+    np.testing.assert_array_equal(modes, direct.modes(len(modes)))
+    np.testing.assert_array_equal(service.array(f"/v1/runs/{run}/mean"), direct.mean())
+    np.testing.assert_array_equal(service.array(f"/v1/runs/{run}/singular-values"), direct.singular_values())
+    assert service.client.get(f"/v1/runs/{run}/convergence").json() == direct.convergence().model_dump(mode="json")
+    history = service.client.get(f"/v1/runs/{run}/convergence/history").json()["evaluations"]
+    assert history == [report.model_dump(mode="json") for report in direct.history]
+    assert not list((service.data / "runs" / run / "journal").iterdir())
+
+
+def test_kill_and_restart_give_the_same_bits(tmp_path: Path) -> None:
+    """Killed twice in mid-run, the second time while batches are being sent and applied."""
+    data = tmp_path / "data"
+    with RunningService(data) as service:
+        run = service.declare()
+        post(service, run, range(12))
+        service.applied(run, 72)
+        service.end(signal.SIGKILL)
+    with RunningService(data) as service:
+        assert service.client.get(f"/v1/runs/{run}").json()["next_sequence"] == 12
+        killer = threading.Timer(0.15, service.process.kill)
+        killer.start()
+        acknowledged = 12
+        with pytest.raises(httpx.TransportError):
+            for sequence in range(12, 2000):
+                post(service, run, range(sequence, sequence + 1))
+                acknowledged = sequence + 1
+        killer.join()
+        service.process.wait(5)
+    with RunningService(data) as service:
+        following = service.client.get(f"/v1/runs/{run}").json()["next_sequence"]
+        assert acknowledged <= following <= acknowledged + 1  # the last one may be stored and not answered
+        last = max(following, 20) + 5
+        post(service, run, range(acknowledged - 3, last))  # overlaps what is stored
+        check_same(service, run, last * BATCH)
+
+
+def test_restart_without_a_checkpoint(tmp_path: Path) -> None:
+    data = tmp_path / "data"
+    with RunningService(data) as service:
+        run = service.declare()
+        service.put(run, 0, snapshots(0, 5))
+        service.put(run, 2, snapshots(9, 12))
+        service.end(signal.SIGKILL)
+    draft = data / "runs" / run / "journal" / "0123.part"
+    stray = data / "runs" / run / "journal" / f"{1:015d}.npy"
+    draft.write_bytes(b"torn")
+    stray.write_bytes(b"renamed, never acknowledged")
+    with RunningService(data) as service:
+        assert not draft.exists()
+        assert not stray.exists()
+        assert service.put(run, 1, snapshots(5, 9)).json()["duplicate"] is False
+        check_same(service, run, 12)
+
+
+def test_a_damaged_checkpoint_is_made_again(tmp_path: Path) -> None:
+    data = tmp_path / "data"
+    with RunningService(data) as service:
+        run = service.declare()
+        for sequence in range(20):
+            service.put(
+                run,
+                sequence,
+                snapshots(sequence * BATCH, (sequence + 1) * BATCH),
+                headers={"Prefer": "wait=10"},
+            )
+        numbers = [
+            one["n_snapshots"] for one in service.client.get(f"/v1/runs/{run}/checkpoints").json()["checkpoints"]
+        ]
+        assert len(numbers) >= 2
+    newest = data / "runs" / run / "checkpoints" / f"{numbers[0]:012d}"
+    victim = max((path for path in newest.rglob("*") if path.is_file()), key=lambda path: path.stat().st_size)
+    spoiled = bytearray(victim.read_bytes())
+    spoiled[len(spoiled) // 2] ^= 1
+    victim.write_bytes(spoiled)
+    with RunningService(data) as service:
+        post(service, run, range(20, 22))
+        check_same(service, run, 22 * BATCH)
+        assert victim.name in service.log
+    assert list(newest.parent.glob("*.damaged-*"))
+
+
+@pytest.mark.parametrize("damage", ["flip", "cut", "remove"])
+def test_a_damaged_batch_is_named(tmp_path: Path, damage: str) -> None:
+    data = tmp_path / "data"
+    with RunningService(data) as service:
+        run = service.declare()
+        post(service, run, range(1))
+        service.end(signal.SIGKILL)
+    file = data / "runs" / run / "journal" / f"{0:015d}.npy"
+    body = bytearray(file.read_bytes())
+    body[-3] ^= 1
+    if damage == "remove":
+        file.unlink()
+    else:
+        file.write_bytes(body if damage == "flip" else body[:-40])
+    with RunningService(data) as service:
+        resource = service.applied(run, 7)
+        assert resource["status"] == "failed"
+        assert file.name in resource["reason"]
+        check_problem(service.put(run, 1, snapshots(7, 14)), 409, "run-failed")
+        other = service.declare()
+        assert service.put(other, 0, snapshots(0, 30), headers={"Prefer": "wait=10"}).status_code == 201
+    assert damage == "remove" or file.exists()
+
+
+def test_a_second_service_is_refused(service: RunningService) -> None:
+    command = [sys.executable, "-m", "service", "serve", "--port", "0", "--data-directory", str(service.data)]
+    second = subprocess.run(command, capture_output=True, text=True, timeout=30, check=False)
+    assert second.returncode == 1
+    assert f"in use by another service (process {service.process.pid})" in second.stderr
+    assert service.client.get("/readyz").status_code == 200
+
+
+def test_sigterm_with_open_streams_ends_soon(tmp_path: Path) -> None:
+    with RunningService(tmp_path / "data") as service:
+        run = service.declare()
+        opened = threading.Event()
+        ended = threading.Event()
+
+        def listen() -> None:
+            with service.client.stream("GET", f"/v1/runs/{run}/events?after=0") as stream:
+                for _ in stream.iter_lines():
+                    opened.set()
+            ended.set()
+
+        held = threading.Thread(
+            target=service.client.get, args=(f"/v1/runs/{run}/convergence?wait_for=settled&timeout=60",)
+        )
+        threads = [threading.Thread(target=listen), held]
+        for thread in threads:
+            thread.start()
+        assert opened.wait(5)
+        time.sleep(0.1)
+        assert service.end(signal.SIGTERM) < 5.0
+        for thread in threads:
+            thread.join(5)
+        assert ended.is_set()
+        assert "Traceback" not in service.log

@@ -46,4 +46,5 @@ def hidden_structure(modal: ModalMoments, n_modes: int, confidence: float = 0.95
     energy = max(float(values[-1]) - edge, 0.0) / n_probes
     wanted = modal.eigenvalues[: max(1, min(n_modes, modal.rank))]
     bound = energy * n_probes / float(chi2.ppf(1.0 - confidence, n_probes))
-    return Hidden(energy, bound, DANGEROUS_SHARE * float(wanted[-1]))
+    least = float(wanted[-1]) if len(wanted) else 0.0  # data that never change have no modes
+    return Hidden(energy, bound, DANGEROUS_SHARE * least)

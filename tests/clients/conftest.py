@@ -58,6 +58,15 @@ class Service:
             time.sleep(0.05)
         raise AssertionError(f"the service did not start:\n{self._log.read_text()}")
 
+    def freeze(self) -> None:
+        """As a stalled disk or a swapped-out process would: connections open, nobody answers."""
+        assert self._process is not None
+        self._process.send_signal(signal.SIGSTOP)
+
+    def thaw(self) -> None:
+        assert self._process is not None
+        self._process.send_signal(signal.SIGCONT)
+
     def kill(self) -> None:
         """As a power switch would: no time to clean up."""
         self._end(signal.SIGKILL)

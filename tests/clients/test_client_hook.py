@@ -125,15 +125,53 @@ def test_a_service_killed_and_restarted_loses_nothing_and_doubles_nothing(
         check_holds_exactly(run, snapshots)
 
 
+@pytest.mark.campaign
+@pytest.mark.parametrize("seed", range(3))
+def test_killed_again_and_again_at_random_moments(
+    own_service: Service, declaration: dict[str, Any], make_snapshots: Make, seed: int
+) -> None:
+    snapshots, rng = make_snapshots(600), np.random.default_rng(seed)
+    kills = set(rng.choice(np.arange(20, 580), 5, replace=False).tolist())
+    with Client(own_service.url, timeout=5.0) as client:
+        run = client.declare(declaration)
+        with run.hook(batch=4) as hook:
+            for step, snapshot in enumerate(snapshots):
+                hook(step, 0.5 * step, snapshot)
+                if step in kills:
+                    time.sleep(float(rng.uniform(0.0, 0.05)))
+                    own_service.kill()
+                    own_service.start(wait=bool(rng.integers(2)))
+                time.sleep(0.001)
+        assert (hook.sent_snapshots, hook.lost_snapshots) == (600, 0)
+        check_holds_exactly(run, snapshots)
+
+
+def test_a_frozen_service_does_not_hold_the_solver_up(
+    own_service: Service, declaration: dict[str, Any], make_snapshots: Make
+) -> None:
+    snapshots = make_snapshots(80)
+    with Client(own_service.url, timeout=1.0) as client:
+        run = client.declare(declaration)
+        with run.hook(batch=8) as hook:
+            own_service.freeze()
+            started = time.monotonic()
+            for step, snapshot in enumerate(snapshots):
+                hook(step, 0.5 * step, snapshot)
+            assert time.monotonic() - started < 0.5
+            own_service.thaw()
+        assert hook.sent_snapshots == 80
+        check_holds_exactly(run, snapshots)
+
+
 def test_a_lost_receipt_is_asked_for_again(service: Service, declaration: dict[str, Any], make_snapshots: Make) -> None:
     snapshots = make_snapshots(80)
-    proxy = CuttingProxy(service.port, n_cuts=4)
+    proxy = CuttingProxy(service.port, n_cuts=2)
     with Client(proxy.url, timeout=5.0) as client:
         run = client.declare(declaration)
         with run.hook(batch=8) as hook:
             for step, snapshot in enumerate(snapshots):
                 hook(step, None, snapshot)
-        assert proxy.n_cut == 4
+        assert proxy.n_cut == 2
         assert (hook.sent_snapshots, hook.lost_snapshots) == (80, 0)
         check_holds_exactly(run, snapshots)
     proxy.close()

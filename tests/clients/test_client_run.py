@@ -138,3 +138,10 @@ def test_waiting_ends_when_settled_and_when_time_is_over(run: Run, make_snapshot
     assert report["verdict"]["state"] == "settled"
     receipt = run.post(make_snapshots(1, seed=99), sequence=8)
     assert (receipt.verdict, receipt.advice) == ("settled", "may stop")
+
+
+def test_a_solver_at_rest_leaves_the_run_gathering(run: Run, make_snapshots: Make) -> None:
+    run.post(np.repeat(make_snapshots(1), 200, axis=0), sequence=0)
+    run.close()
+    assert run.wait(20.0)["verdict"]["state"] == "gathering"
+    assert run.status == "closed"

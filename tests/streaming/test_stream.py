@@ -6,6 +6,7 @@ import os
 import subprocess
 import sys
 from pathlib import Path
+from typing import ClassVar
 
 import numpy as np
 import pytest
@@ -154,7 +155,7 @@ class TestGoingOn:
 
 
 class TestNeverSettledTooEarly:
-    CRITERION = {"n_modes": 2, "max_angle_deg": 20.0}
+    CRITERION: ClassVar = {"n_modes": 2, "max_angle_deg": 20.0}
 
     def states(self, stream: SnapshotStream) -> list[State]:
         return [report.verdict.state for report in stream.history]

@@ -2,119 +2,127 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from collections.abc import Iterator
 
 from streaming.declaration import Criterion
-from streaming.forecast import Need, angle_need
-from streaming.groups import Grouping
-from streaming.hidden import Hidden
-from streaming.misalignment import Misalignment
-from streaming.modal import ModalMoments
+from streaming.evidence import Context, Evidence
+from streaming.groups import Group
 from streaming.report import State
-from streaming.stationarity import Drift, Startup
-from streaming.verdict import Finding
+from streaming.verdict import ANGLE, Finding
 
-if TYPE_CHECKING:
-    from streaming.assessment import Context
+MIN_BLOCKS = 16  # fewer leave the variances with so few degrees of freedom that bounds mean little
 
-MIN_BLOCKS = 16
-MIN_EFFECTIVE = 50.0
+# Independent samples below which first-order bounds on angles fall short of their confidence.
+MIN_EFFECTIVE_SAMPLES = 50
+
+# Variance with longer blocks against the variance used; beyond, a block is shorter than the memory of the flow.
+MAX_PLATEAU = 1.5
+
+# Share of repeated snapshots that a restart may leave behind; more, and the source has stood still.
+MAX_REPEATED_FRACTION = 0.01
 
 
-def failing_clauses(
-    criterion: Criterion,
-    modal: ModalMoments,
-    startup: Startup,
-    drift: Drift,
-    grouping: Grouping,
-    groups: tuple[tuple[int, int], ...],
-    misalignments: tuple[Misalignment, ...],
-    halfwidths: tuple[float, ...],
-    hidden: Hidden,
-    context: Context,
-) -> list[Finding]:
+def failing_clauses(evidence: Evidence, criterion: Criterion, context: Context) -> tuple[Finding, ...]:
     """Return every clause that keeps the run from being settled."""
-    findings = []
-    if modal.n_blocks < MIN_BLOCKS:
-        findings.append(
-            Finding(
-                State.GATHERING, "few-blocks", f"{modal.n_blocks} blocks of time, {MIN_BLOCKS} are needed."
-            )
+    return (
+        *_gathering(evidence, criterion, context),
+        *_drifting(evidence),
+        *_repeating(context),
+        *_inseparable(evidence, criterion),
+        *_loose(evidence, criterion),
+        *_hidden(evidence, criterion),
+    )
+
+
+def _gathering(evidence: Evidence, criterion: Criterion, context: Context) -> Iterator[Finding]:
+    n_blocks, effective = evidence.modal.n_blocks, evidence.effective_samples
+    if n_blocks < MIN_BLOCKS:
+        text = f"The record holds {n_blocks} blocks of time so far; {MIN_BLOCKS} are the least to judge from."
+        yield Finding(State.GATHERING, "few-blocks", text)
+    elif effective < MIN_EFFECTIVE_SAMPLES:
+        text = (
+            f"The {evidence.modal.n_snapshots} snapshots are worth {effective:.0f} independent ones; "
+            f"{MIN_EFFECTIVE_SAMPLES} are the least to judge from. Taking them closer together adds nothing."
         )
-    effective = min((m.effective_samples for m in misalignments), default=0.0)
-    if effective < MIN_EFFECTIVE:
-        findings.append(
-            Finding(
-                State.GATHERING,
-                "few-samples",
-                f"The record is worth {effective:.0f} independent snapshots, {MIN_EFFECTIVE:.0f} are needed.",
-            )
+        yield Finding(State.GATHERING, "few-samples", text)
+    elif evidence.plateau > MAX_PLATEAU:
+        text = (
+            f"Blocks of {evidence.block_span} snapshots are shorter than the memory of the flow: the variance "
+            f"still grows by a factor of {evidence.plateau:.2f} when they are joined."
         )
-    if startup.in_doubt:
-        findings.append(
-            Finding(
-                State.DRIFTING,
-                "start-up",
-                "No end of the start-up was found in the first half of the record.",
-            )
+        yield Finding(State.GATHERING, "long-memory", text)
+    if criterion.min_duration is not None and context.time_span < criterion.min_duration:
+        text = f"The record spans {context.time_span:.6g} of the min_duration {criterion.min_duration:.6g}."
+        yield Finding(State.GATHERING, "min-duration", text)
+
+
+def _drifting(evidence: Evidence) -> Iterator[Finding]:
+    if evidence.startup.in_doubt:
+        text = (
+            "The start of the record differs from the rest, and the start-up reaches beyond the first half; go on "
+            "until it is a small part of the record."
         )
-    if drift.drifting:
-        findings.append(
-            Finding(State.DRIFTING, "drift", f"The halves of the record differ (p = {drift.p_value:.2g}).")
+        yield Finding(State.DRIFTING, "start-up", text)
+    if evidence.drift.drifting:
+        text = (
+            f"The halves of the record differ in energy, mean or shape (p = {evidence.drift.p_value:.1g}): the flow "
+            "is still developing, or changed on the way."
         )
-    if context.repeated_snapshots > 0.01 * context.n_snapshots:
-        findings.append(
-            Finding(
-                State.UNSETTLED,
-                "repeated-snapshots",
-                f"{context.repeated_snapshots} of {context.n_snapshots} snapshots repeat the one before.",
-            )
+        yield Finding(State.DRIFTING, "drift", text)
+
+
+def _repeating(context: Context) -> Iterator[Finding]:
+    repeated, n = context.repeated_snapshots, max(context.n_snapshots, 1)
+    if repeated > MAX_REPEATED_FRACTION * n:
+        text = (
+            f"{repeated} of {n} snapshots equal the one before in every row: the source stands still or repeats "
+            "its output. Repeats look like perfect convergence, so nothing is judged from them."
         )
-    if grouping.open_start is not None:
-        able = grouping.separable[-1] if grouping.separable else 0
-        findings.append(
-            Finding(
-                State.INSEPARABLE,
-                "open-group",
-                f"Mode {grouping.open_start + 1} and those after it up to the retained rank cannot be told apart; "
-                f"{able} modes could be separated.",
-            )
-        )
-    for (start, stop), m in zip(groups, misalignments, strict=True):
+        yield Finding(State.UNSETTLED, "repeated-snapshots", text)
+
+
+def _inseparable(evidence: Evidence, criterion: Criterion) -> Iterator[Finding]:
+    start = evidence.grouping.open_start
+    if start is None:
+        return
+    able = [n for n in evidence.grouping.separable if n <= criterion.n_modes]
+    hint = f"n_modes = {able[-1]} can be judged now" if able else "no number of leading modes can be judged now"
+    rank = evidence.modal.rank
+    text = (
+        f"Mode {min(criterion.n_modes, rank)} belongs to a group that begins at mode {start + 1} and does not close "
+        f"within the {rank} retained ones: their energies cannot be told apart yet. {hint[0].upper()}{hint[1:]}; "
+        "otherwise go on, or declare a larger retained_rank."
+    )
+    yield Finding(State.INSEPARABLE, "open-group", text)
+
+
+def _loose(evidence: Evidence, criterion: Criterion) -> Iterator[Finding]:
+    limit = criterion.max_energy_halfwidth
+    for group, m, half in zip(evidence.groups, evidence.misalignments, evidence.halfwidths, strict=True):
         if m.bound_deg > criterion.max_angle_deg:
-            findings.append(
-                Finding(
-                    State.UNSETTLED,
-                    "angle",
-                    f"Modes {start + 1} to {stop}: misalignment bound {m.bound_deg:.1f} deg, tolerated "
-                    f"{criterion.max_angle_deg:g} deg.",
-                )
+            text = (
+                f"{group_name(group)}: misalignment at most {m.bound_deg:.1f} deg at "
+                f"{100 * criterion.confidence:g} % confidence, tolerated {criterion.max_angle_deg:g} deg."
             )
+            yield Finding(State.UNSETTLED, ANGLE, text)
+        if limit is not None and (half is None or half > limit):
+            known = "not known yet" if half is None else f"known to +- {100 * half:.1f} %"
+            text = f"{group_name(group)}: energy {known}, tolerated +- {100 * limit:g} %."
+            yield Finding(State.UNSETTLED, "energy", text)
+
+
+def _hidden(evidence: Evidence, criterion: Criterion) -> Iterator[Finding]:
+    hidden = evidence.hidden
     if hidden.dangerous:
-        findings.append(
-            Finding(
-                State.UNSETTLED,
-                "hidden-structure",
-                f"A direction outside the basis may hold an energy of {hidden.energy_bound:.3g}, against "
-                f"{modal.eigenvalues[min(criterion.n_modes, modal.rank) - 1]:.3g} of the last wanted mode; "
-                "declare a larger retained_rank.",
-            )
+        text = (
+            f"A direction that the basis has dropped may hold an energy of {hidden.energy_bound:.3g}, more than "
+            f"{hidden.limit:.3g}, half of that of mode {min(criterion.n_modes, evidence.modal.rank)}; it may "
+            "belong among the wanted modes. Declare a larger retained_rank."
         )
-    return findings
+        yield Finding(State.UNSETTLED, "hidden-structure", text)
 
 
-def needs(
-    criterion: Criterion,
-    modal: ModalMoments,
-    grouping: Grouping,
-    misalignments: tuple[Misalignment, ...],
-    context: Context,
-) -> list[Need]:
-    """Record lengths, relative to the present one, that each clause asks for."""
-    import math
-
-    tolerance = math.sin(math.radians(criterion.max_angle_deg))
-    out = [Need(1.0, 1.0, 1.0)]
-    for m in misalignments:
-        out.append(angle_need(m.sampling_bound, m.truncation, tolerance, m.freedom))
-    return out
+def group_name(group: Group) -> str:
+    """Name of a group in sentences; modes count from 1."""
+    start, stop = group
+    return f"Mode {stop}" if stop == start + 1 else f"Modes {start + 1} to {stop}"

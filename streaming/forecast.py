@@ -3,68 +3,95 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 from scipy.stats import chi2
 
+from streaming.declaration import Criterion
+from streaming.evidence import Context, Evidence
+from streaming.findings import MIN_BLOCKS, MIN_EFFECTIVE_SAMPLES
 from streaming.report import SnapshotsToGo
+from streaming.verdict import Look, agreeing_looks
 
-# Looks that can change the verdict are spaced geometrically: peeking more often costs confidence, less often time.
+# Looks that can change the verdict are spaced by this factor: peeking more often costs confidence and saves little.
 LOOK_RATIO = 1.25
 
-# Beyond this many times the record so far a forecast says nothing that a user could plan with.
-MAX_RATIO = 1000.0
+MAX_RATIO = 1000.0  # beyond so many times the present record a forecast says nothing that one could plan with
+LEVEL = 0.9  # of the interval, common practice
 
 
 @dataclass(frozen=True)
 class Need:
-    """Record length needed, relative to the present one, with its interval."""
+    """Length of record needed, relative to the present one: estimate and interval."""
 
     estimate: float
     low: float
     high: float
 
 
-def angle_need(
-    sampling: float, truncation: float, tolerance: float, freedom: float, level: float = 0.9
-) -> Need:
-    """Record needed until sampling + truncation falls to the tolerance, all sines.
+def forecast(evidence: Evidence, criterion: Criterion, context: Context, look: Look) -> SnapshotsToGo | None:
+    """Snapshots to go until the verdict can be settled, or None when that cannot be foreseen."""
+    needs = [Need(1.0, 1.0, 1.0), *_angle_needs(evidence, criterion), *_other_needs(evidence, criterion, context)]
+    need = Need(*(max(getattr(n, name) for n in needs) for name in ("estimate", "low", "high")))
+    if need.estimate >= MAX_RATIO:
+        return None
+    agreeing = agreeing_looks(look, context.previous, criterion.max_angle_deg) if look.sound else 0
+    least = max(1, criterion.hold - agreeing)
+    numbers = [_through_looks(context.n_snapshots, ratio, least) for ratio in (need.estimate, need.low, need.high)]
+    step = context.time_step
+    return SnapshotsToGo(
+        estimate=numbers[0],
+        low=numbers[1],
+        high=numbers[2],
+        time=None if step is None else numbers[0] * step,
+    )
 
-    The interval comes from the sampling of the variance behind ``sampling``, freedom * V / chi2.
+
+def _angle_needs(evidence: Evidence, criterion: Criterion) -> Iterator[Need]:
+    tolerance = math.sin(math.radians(criterion.max_angle_deg))
+    for m in evidence.misalignments:
+        yield angle_need(m.sampling_bound, m.truncation, tolerance, m.freedom)
+
+
+def angle_need(sampling: float, truncation: float, tolerance: float, freedom: float) -> Need:
+    """Record needed until sampling * ratio^(-1/2) + truncation falls to the tolerance, all sines.
+
+    The interval is that of the variance behind ``sampling``, known to freedom / chi2(freedom).
     """
     room = tolerance - truncation
     if room <= 0.0:
         return Need(MAX_RATIO, MAX_RATIO, MAX_RATIO)
     ratio = (sampling / room) ** 2
-    tail = (1.0 - level) / 2
-    spread = chi2.ppf([tail, 1.0 - tail], freedom) / freedom
-    return Need(ratio, ratio * float(spread[0]), ratio / float(spread[0]))
+    low, high = (float(chi2.ppf(q, freedom)) / freedom for q in ((1.0 - LEVEL) / 2, (1.0 + LEVEL) / 2))
+    return Need(ratio, ratio / high, ratio / max(low, 1e-9))
 
 
-def longest(needs: list[Need]) -> Need:
-    """The need that holds all the others back."""
-    return Need(
-        max(need.estimate for need in needs),
-        max(need.low for need in needs),
-        max(need.high for need in needs),
-    )
+def _other_needs(evidence: Evidence, criterion: Criterion, context: Context) -> Iterator[Need]:
+    """Clauses whose numbers grow or shrink in a known way with the record."""
+    ratios = [MIN_BLOCKS / evidence.modal.n_blocks]
+    if evidence.effective_samples > 0:
+        ratios.append(MIN_EFFECTIVE_SAMPLES / evidence.effective_samples)
+    if criterion.min_duration is not None:
+        ratios.append(criterion.min_duration / context.time_span if context.time_span > 0 else MAX_RATIO)
+    if criterion.max_energy_halfwidth is not None:
+        known = [half for half in evidence.halfwidths if half is not None]
+        ratios += [(half / criterion.max_energy_halfwidth) ** 2 for half in known] or [MAX_RATIO]
+    start = evidence.grouping.open_start
+    if start is not None:
+        ratios.append(_opening_need(evidence, start, criterion.n_modes))
+    for ratio in ratios:
+        yield Need(ratio, ratio, ratio)
 
 
-def snapshots_to_go(
-    need: Need, n_snapshots: int, looks_to_hold: int, time_step: float | None
-) -> SnapshotsToGo | None:
-    """Snapshots still to go: the need, brought up to the grid of looks, and the looks that must agree."""
-    if need.estimate >= MAX_RATIO:
-        return None
-    estimate, low, high = (
-        _up_to_look(n_snapshots, min(ratio, MAX_RATIO), looks_to_hold)
-        for ratio in (need.estimate, need.low, need.high)
-    )
-    return SnapshotsToGo(
-        estimate=estimate, low=low, high=high, time=None if time_step is None else estimate * time_step
-    )
+def _opening_need(evidence: Evidence, start: int, n_modes: int) -> float:
+    """Record needed to close an open group at the clearest gap from the last wanted mode on; F grows like N."""
+    statistics = evidence.grouping.statistics[max(start, n_modes - 1) :]
+    best = float(statistics.max(initial=0.0))
+    return evidence.grouping.critical / best if best > 0 else MAX_RATIO
 
 
-def _up_to_look(n_snapshots: int, ratio: float, looks_to_hold: int) -> int:
-    looks = max(0, math.ceil(math.log(max(ratio, 1.0)) / math.log(LOOK_RATIO) - 1e-9))
-    return math.ceil(n_snapshots * (LOOK_RATIO ** max(looks, looks_to_hold) - 1.0))
+def _through_looks(n_snapshots: int, ratio: float, least: int) -> int:
+    """Snapshots until the first look at which the need is met, and not before ``least`` more looks."""
+    needed = math.ceil(math.log(min(max(ratio, 1.0), MAX_RATIO)) / math.log(LOOK_RATIO) - 1e-9)
+    return math.ceil(n_snapshots * (LOOK_RATIO ** max(needed, least) - 1.0))

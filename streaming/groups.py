@@ -11,9 +11,10 @@ import numpy as np
 import numpy.typing as npt
 from scipy.stats import f as f_distribution
 
-from streaming.modal import ModalMoments, score_variance
+from streaming.modal import ModalMoments, score_variance, variance_freedom
 
 Array = npt.NDArray[np.float64]
+Group = tuple[int, int]  # index range [start, stop) of the modes, counted from 0
 
 # Two modes count as separate when equal energies would give their gap in fewer than 5 % of records.
 SEPARATION_LEVEL = 0.95
@@ -21,17 +22,17 @@ SEPARATION_LEVEL = 0.95
 
 @dataclass(frozen=True)
 class Grouping:
-    """Groups among the leading modes, as index ranges [start, stop) counted from 0.
+    """Groups among the leading modes, as far as they close.
 
     Attributes
     ----------
-    groups : closed groups, covering the wanted modes as far as they close
+    groups : closed groups
     open_start : first mode of a group that does not close within the retained rank, or None
     statistics : (n,) F statistic of each gap, gap k between modes k and k + 1
     critical : value that F must exceed for a gap to count as separate
     """
 
-    groups: tuple[tuple[int, int], ...]
+    groups: tuple[Group, ...]
     open_start: int | None
     statistics: Array
     critical: float
@@ -42,11 +43,11 @@ class Grouping:
         return tuple(stop for _, stop in self.groups)
 
 
-def gap_statistics(modal: ModalMoments, width: int = 1) -> Array:
+def gap_statistics(modal: ModalMoments) -> Array:
     """F statistic of each gap between neighbouring scored modes, (K - 1,).
 
-    gap^2 / (2 s^2) with s^2 = (Var(C_ii - C_jj) + 4 Var(C_ij)) / 2; equal energies give F(2, 2 (B - 1)), since
-    the gap of an equal pair is then Rayleigh distributed.
+    gap^2 / (2 s^2) with s^2 = (Var(C_ii - C_jj) + 4 Var(C_ij)) / 2; equal energies give F(2, 2 nu), since
+    the gap of an equal pair is Rayleigh distributed, with nu the degrees of freedom of one variance.
 
     References
     ----------
@@ -55,8 +56,8 @@ def gap_statistics(modal: ModalMoments, width: int = 1) -> Array:
     """
     k = np.arange(modal.n_scored - 1)
     scores = modal.scores
-    difference = score_variance(scores[:, k, k] - scores[:, k + 1, k + 1], width)
-    cross = score_variance(scores[:, k, k + 1], width)
+    difference = score_variance(scores[:, k, k] - scores[:, k + 1, k + 1], modal.width)
+    cross = score_variance(scores[:, k, k + 1], modal.width)
     spread = difference + 4.0 * cross
     gap = modal.eigenvalues[k] - modal.eigenvalues[k + 1]
     floor = np.finfo(np.float64).tiny
@@ -64,13 +65,11 @@ def gap_statistics(modal: ModalMoments, width: int = 1) -> Array:
     return statistics
 
 
-def find_groups(
-    modal: ModalMoments, n_modes: int, width: int = 1, level: float = SEPARATION_LEVEL
-) -> Grouping:
+def find_groups(modal: ModalMoments, n_modes: int, level: float = SEPARATION_LEVEL) -> Grouping:
     """Group the leading modes until the group that holds mode ``n_modes`` is closed, taken whole."""
-    statistics = gap_statistics(modal, width)
-    critical = critical_value(modal.n_blocks, width, level)
-    groups: list[tuple[int, int]] = []
+    statistics = gap_statistics(modal)
+    critical = critical_value(modal.n_blocks, modal.width, level)
+    groups: list[Group] = []
     start = 0
     for gap in range(len(statistics)):
         if statistics[gap] > critical:
@@ -85,10 +84,3 @@ def critical_value(n_blocks: int, width: int, level: float) -> float:
     """Value that the gap statistic of an equal pair exceeds with probability 1 - level."""
     freedom = variance_freedom(n_blocks, width)
     return float(f_distribution.ppf(level, 2, 2 * freedom))
-
-
-def variance_freedom(n_blocks: int, width: int) -> float:
-    """Degrees of freedom of one variance from overlapping blocks: 1.5 times those of separate long blocks."""
-    if width == 1:
-        return max(n_blocks - 1.0, 1.0)
-    return max(1.5 * (n_blocks / width - 1.0), 1.0)

@@ -20,6 +20,11 @@ from streaming.moments import Moments
 
 Array = npt.NDArray[np.float64]
 
+# Blocks joined in the variance of a mean, at every start. Two make a block 1/32 to 1/16 of the record; in trials
+# with known modes single blocks covered 91 to 95 % at a nominal 95 %, pairs 94 to 96 %.
+WIDTH = 2
+MIN_BLOCKS_TO_JOIN = 8  # below, single blocks: a rough number is better than none while a run gathers
+
 
 @dataclass(frozen=True)
 class ModalMoments:
@@ -38,7 +43,8 @@ class ModalMoments:
     residuals : (R, p) covariance of each modal coefficient with the part outside, scaled by p^(-1/2)
     n_snapshots : N
     total_energy : variance of y, all rows together
-    block_energies : (B,) mean of |y|^2 over each block, about the datum
+    block_energies : (B,) mean of |y|^2 over each block, about the mean of the record
+    outside_level : mean variance of a direction outside the basis; 0 when the number of rows is not known
     """
 
     eigenvalues: Array
@@ -52,6 +58,7 @@ class ModalMoments:
     n_snapshots: int
     total_energy: float
     block_energies: Array
+    outside_level: float
 
     @property
     def rank(self) -> int:
@@ -60,6 +67,11 @@ class ModalMoments:
     @property
     def n_blocks(self) -> int:
         return len(self.shares)
+
+    @property
+    def width(self) -> int:
+        """Blocks joined in variances."""
+        return WIDTH if self.n_blocks >= MIN_BLOCKS_TO_JOIN else 1
 
     @property
     def n_scored(self) -> int:
@@ -76,7 +88,7 @@ class ModalMoments:
         return max(self.total_energy - self.captured_energy, 0.0)
 
 
-def modal_moments(moments: Moments, n_leading: int) -> ModalMoments:
+def modal_moments(moments: Moments, n_leading: int, n_rows: int | None = None) -> ModalMoments:
     """Turn block moments into modal coordinates, with scores for the ``n_leading`` first modes.
 
     Costs O(B K (R + p)^2) and O(R^3).
@@ -93,6 +105,8 @@ def modal_moments(moments: Moments, n_leading: int) -> ModalMoments:
     whole = view @ covariance @ view.T
     mean = moments.mean()
     offsets = (moments.means - mean) @ view.T
+    total = max(float(moments.energies.sum()) / moments.n_snapshots - moments.mean_energy, 0.0)
+    left = 0 if n_rows is None else n_rows - rank
     return ModalMoments(
         eigenvalues=values,
         rotation=rotation,
@@ -103,8 +117,9 @@ def modal_moments(moments: Moments, n_leading: int) -> ModalMoments:
         outside=whole[rank:, rank:] / scale**2,
         residuals=whole[:rank, rank:],
         n_snapshots=moments.n_snapshots,
-        total_energy=max(float(moments.energies.sum()) / moments.n_snapshots - moments.mean_energy, 0.0),
+        total_energy=total,
         block_energies=moments.block_energies(),
+        outside_level=max(total - float(values.sum()), 0.0) / left if left > 0 else 0.0,
     )
 
 
@@ -146,3 +161,14 @@ def score_variance(scores: Array, width: int) -> Array:
     unbiased = n_blocks / (len(joined) * width * (1.0 - width / n_blocks))
     variance: Array = unbiased * np.einsum("b...,b...->...", joined, joined)
     return variance
+
+
+def variance_freedom(n_blocks: int, width: int) -> float:
+    """Degrees of freedom of a variance from overlapping blocks: 1.5 times those of separate long blocks.
+
+    References
+    ----------
+    Meketon & Schmeiser (1984), as above.
+    """
+    factor = 1.0 if width == 1 else 1.5
+    return max(factor * (n_blocks / width - 1.0), 1.0)

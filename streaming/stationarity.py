@@ -70,9 +70,7 @@ def _startup_series(moments: Moments, n_modes: int) -> Array:
     """Block means of |y|^2 and of the leading coordinates, and the variances of these, (B, n)."""
     n = min(n_modes, moments.rank)
     variances = np.einsum("bii->bi", moments.scatters[:, :n, :n]) / moments.counts[:, None]
-    return np.concatenate(
-        [moments.block_energies()[:, None], variances, moments.means[:, :n]], axis=1
-    )
+    return np.concatenate([moments.block_energies()[:, None], variances, moments.means[:, :n]], axis=1)
 
 
 def _differs(values: Array, cut: int, level: float) -> bool:
@@ -104,10 +102,7 @@ def find_drift(modal: ModalMoments, n_modes: int) -> Drift:
 
 def half_against_half(first: Array, second: Array) -> Array:
     """Two-sided p-values of Welch's t on block values (b, n), their neighbours joined in pairs."""
-    joined = [
-        0.5 * (part[0 : len(part) // 2 * 2 : 2] + part[1 : len(part) // 2 * 2 : 2])
-        for part in (first, second)
-    ]
+    joined = [0.5 * (part[0 : len(part) // 2 * 2 : 2] + part[1 : len(part) // 2 * 2 : 2]) for part in (first, second)]
     errors = [part.var(axis=0, ddof=1) / len(part) for part in joined]
     spread = np.sqrt(errors[0] + errors[1])
     difference = np.abs(joined[0].mean(axis=0) - joined[1].mean(axis=0))

@@ -58,6 +58,10 @@ class Service:
             time.sleep(0.05)
         raise AssertionError(f"the service did not start:\n{self._log.read_text()}")
 
+    @property
+    def running(self) -> bool:
+        return self._process is not None and self._process.poll() is None
+
     def freeze(self) -> None:
         """As a stalled disk or a swapped-out process would: connections open, nobody answers."""
         assert self._process is not None
@@ -96,13 +100,20 @@ def service(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Service]:
     shared.stop()
 
 
+@pytest.fixture(scope="session")
+def _mortal(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Service]:
+    mortal = Service(tmp_path_factory.mktemp("mortal") / "data")
+    yield mortal
+    mortal.stop()
+
+
 @pytest.fixture
-def own_service(tmp_path: Path) -> Iterator[Service]:
-    """A service for one test, which may kill it."""
-    own = Service(tmp_path / "data")
-    own.start()
-    yield own
-    own.stop()
+def mortal_service(_mortal: Service) -> Service:
+    """A running service that the test may kill or freeze; one process serves all such tests until it is killed."""
+    if not _mortal.running:
+        _mortal.start()
+    _mortal.wait_until_ready()
+    return _mortal
 
 
 @pytest.fixture

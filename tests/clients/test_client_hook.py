@@ -106,19 +106,19 @@ def test_the_advice_turns_when_the_modes_have_settled(
 
 
 def test_a_service_killed_and_restarted_loses_nothing_and_doubles_nothing(
-    own_service: Service, declaration: dict[str, Any], make_snapshots: Make
+    mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make
 ) -> None:
     snapshots = make_snapshots(240)
-    with Client(own_service.url, timeout=5.0) as client:
+    with Client(mortal_service.url, timeout=5.0) as client:
         run = client.declare(declaration)
         with run.hook(batch=8) as hook:
             for step, snapshot in enumerate(snapshots):
                 hook(step, 0.5 * step, snapshot)
                 if step == 100:
-                    own_service.kill()
+                    mortal_service.kill()
                 if step == 140:
                     assert hook.advice == "continue"
-                    own_service.start(wait=False)
+                    mortal_service.start(wait=False)
                 time.sleep(0.002)
         assert (hook.sent_snapshots, hook.lost_snapshots) == (240, 0)
         assert run.next_sequence == 30
@@ -128,37 +128,37 @@ def test_a_service_killed_and_restarted_loses_nothing_and_doubles_nothing(
 @pytest.mark.campaign
 @pytest.mark.parametrize("seed", range(3))
 def test_killed_again_and_again_at_random_moments(
-    own_service: Service, declaration: dict[str, Any], make_snapshots: Make, seed: int
+    mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make, seed: int
 ) -> None:
     snapshots, rng = make_snapshots(600), np.random.default_rng(seed)
     kills = set(rng.choice(np.arange(20, 580), 5, replace=False).tolist())
-    with Client(own_service.url, timeout=5.0) as client:
+    with Client(mortal_service.url, timeout=5.0) as client:
         run = client.declare(declaration)
         with run.hook(batch=4) as hook:
             for step, snapshot in enumerate(snapshots):
                 hook(step, 0.5 * step, snapshot)
                 if step in kills:
                     time.sleep(float(rng.uniform(0.0, 0.05)))
-                    own_service.kill()
-                    own_service.start(wait=bool(rng.integers(2)))
+                    mortal_service.kill()
+                    mortal_service.start(wait=bool(rng.integers(2)))
                 time.sleep(0.001)
         assert (hook.sent_snapshots, hook.lost_snapshots) == (600, 0)
         check_holds_exactly(run, snapshots)
 
 
 def test_a_frozen_service_does_not_hold_the_solver_up(
-    own_service: Service, declaration: dict[str, Any], make_snapshots: Make
+    mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make
 ) -> None:
     snapshots = make_snapshots(80)
-    with Client(own_service.url, timeout=1.0) as client:
+    with Client(mortal_service.url, timeout=1.0) as client:
         run = client.declare(declaration)
         with run.hook(batch=8) as hook:
-            own_service.freeze()
+            mortal_service.freeze()
             started = time.monotonic()
             for step, snapshot in enumerate(snapshots):
                 hook(step, 0.5 * step, snapshot)
             assert time.monotonic() - started < 0.5
-            own_service.thaw()
+            mortal_service.thaw()
         assert hook.sent_snapshots == 80
         check_holds_exactly(run, snapshots)
 

@@ -10,9 +10,10 @@ from typing import Any
 from fastapi import FastAPI
 from pydantic.json_schema import models_json_schema
 
-from service import routes_batches, routes_events, routes_plain, routes_results, routes_runs
+from service import routes_batches, routes_events, routes_page, routes_plain, routes_results, routes_runs
 from service.answers import ProblemDocument
 from service.core import Service
+from service.headers import SecurityHeaders
 from service.middleware import Guard
 from service.translation import install
 
@@ -43,10 +44,11 @@ def create_app(service: Service) -> FastAPI:
         redoc_url=None,
     )
     app.state.service = service
-    for routes in (routes_runs, routes_batches, routes_results, routes_events, routes_plain):
+    for routes in (routes_runs, routes_batches, routes_results, routes_events, routes_page, routes_plain):
         app.include_router(routes.router)
     install(app)
     app.add_middleware(Guard, settings=service.settings)
+    app.add_middleware(SecurityHeaders)  # outermost: also on what the guard refuses
     _describe_problems(app)
     return app
 

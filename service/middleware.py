@@ -11,12 +11,15 @@ from starlette.datastructures import Headers
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service.problems import PROBLEM_JSON, Problem
+from service.session import Session
 from service.settings import Settings, is_loopback
 
 logger = logging.getLogger("slackwater")
 
-# Probes carry no data, and must answer whoever watches the service.
-OPEN_PATHS = frozenset({"/livez", "/readyz"})
+# Probes carry no data, and must answer whoever watches the service; so do the files of the page, which asks for the
+# token itself.
+OPEN_PATHS = frozenset({"/livez", "/readyz", "/"})
+OPEN_FOLDER = "/page/"
 # Bodies that are streamed and bounded by their handler.
 _ARRAY_ENDINGS = ("/batches", "/weights", "/positions")
 
@@ -27,6 +30,7 @@ class Guard:
     def __init__(self, app: ASGIApp, settings: Settings) -> None:
         self._app = app
         self._token = None if settings.token is None else settings.token.get_secret_value().encode()
+        self._session = None if self._token is None else Session(self._token)
         self._loopback_only = is_loopback(settings.host)
         self._max_json_bytes = settings.max_json_bytes
 
@@ -37,8 +41,8 @@ class Guard:
         headers = Headers(scope=scope)
         try:
             self._check_host(headers)
-            if scope["path"] not in OPEN_PATHS:
-                self._check_token(headers)
+            if scope["path"] not in OPEN_PATHS and not scope["path"].startswith(OPEN_FOLDER):
+                self._check_token(scope["method"], headers)
             if not _is_array(scope["path"]):
                 self._check_length(headers)
                 receive = self._bounded(receive)
@@ -73,8 +77,8 @@ class Guard:
         if self._loopback_only and host and not is_loopback(host):
             raise Problem("host-refused", f"this service answers on loopback names only, not as {host[:80]!r}")
 
-    def _check_token(self, headers: Headers) -> None:
-        if self._token is None:
+    def _check_token(self, method: str, headers: Headers) -> None:
+        if self._token is None or self._session is None or self._session.opens(method, headers.get("cookie", "")):
             return
         scheme, _, given = headers.get("authorization", "").partition(" ")
         if scheme.lower() != "bearer" or not hmac.compare_digest(given.strip().encode(), self._token):

@@ -1,77 +1,19 @@
-"""Pages for people, made here and complete in themselves: the runs, the operations, the problem types."""
+"""Plain pages for people, made here and complete in themselves: the operations and the problem types."""
 
 from __future__ import annotations
 
-import json
 from html import escape
 from typing import Any
 
-from service.answers import RunResource
-from service.board import Published
 from service.problems import CATALOGUE
 
-CAUTION = (
-    "Settled modes mean that the sampling of what was recorded suffices. They say nothing of mesh, time step, "
-    "turbulence model, wall interference, calibration or of states that the run has not visited. Not for "
-    "certification, load cases or safety decisions without licensed practice and the local codes. Never wire the "
-    "verdict to an interlock or let it drive a rig: a person stops the machine."
-)
-
-_STYLE = """
-:root { color-scheme: light dark; font: 16px/1.5 system-ui, sans-serif; }
-body { max-width: 60rem; margin: 2rem auto; padding: 0 1rem; }
-table { border-collapse: collapse; width: 100%; } th, td { text-align: left; padding: .4rem .6rem .4rem 0;
-border-bottom: 1px solid #8886; vertical-align: top; } code { font-size: .9em; } .note { opacity: .8; font-size: .9em; }
-h2 { margin-top: 2rem; } .state { font-weight: 600; }
-"""
-
-
-def page(title: str, body: str, refresh_seconds: int | None = None) -> str:
-    """A whole document."""
-    refresh = f'<meta http-equiv="refresh" content="{refresh_seconds}">' if refresh_seconds else ""
+def page(title: str, body: str) -> str:
+    """A whole document; its style is a file of its own, since the pages allow none inside."""
     return (
         '<!doctype html><html lang="en"><head><meta charset="utf-8">'
         '<meta name="viewport" content="width=device-width, initial-scale=1">'
-        f"{refresh}<title>{escape(title)}</title><style>{_STYLE}</style></head><body>{body}</body></html>"
+        f'<title>{escape(title)}</title><link rel="stylesheet" href="/page/plain.css"></head><body>{body}</body></html>'
     )
-
-
-def runs_page(runs: list[tuple[RunResource, Published]], version: str) -> str:
-    """All runs with their verdicts."""
-    head = "<tr><th>Run</th><th>Verdict</th><th>May it stop?</th><th>Snapshots</th><th>Still to go</th></tr>"
-    rows = "".join(_run_row(run, published) for run, published in runs)
-    table = f"<table>{head}{rows}</table>" if runs else "<p>No run has been declared yet.</p>"
-    return page(
-        "Slackwater",
-        f"<h1>Slackwater</h1><p>Have the leading modes settled?</p>{table}"
-        f'<p class="note">{escape(CAUTION)}</p><p class="note">Version {escape(version)}. '
-        '<a href="/docs">Operations</a>, <a href="/openapi.json">OpenAPI</a>, <a href="/metrics">metrics</a>.</p>',
-        refresh_seconds=5,
-    )
-
-
-def _run_row(run: RunResource, published: Published) -> str:
-    name, address = escape(run.declaration.name), f"/v1/runs/{escape(run.id)}"
-    why = "; ".join(_reasons(published)) if run.status != "failed" else f"failed: {run.reason}"
-    advice = run.advice if run.status == "open" else run.status
-    waiting = f"; waits for batch {run.waiting.missing_sequence}" if run.waiting else ""
-    return (
-        f'<tr><td><a href="{address}">{name}</a></td>'
-        f'<td><span class="state">{escape(run.verdict)}</span> <span class="note">{escape(why)}</span></td>'
-        f"<td>{escape(advice)}</td><td>{run.n_applied} of {run.n_snapshots} applied{waiting}</td>"
-        f"<td>{_to_go(published)}</td></tr>"
-    )
-
-
-def _reasons(published: Published) -> list[str]:
-    if published.report is None:
-        return ["the first block is not full yet"]
-    return [reason["text"] for reason in json.loads(published.report)["verdict"]["reasons"]]
-
-
-def _to_go(published: Published) -> str:
-    to_go = published.snapshots_to_go
-    return "" if to_go is None else f"{to_go['estimate']} ({to_go['low']} to {to_go['high']})"
 
 
 def docs_page(description: dict[str, Any]) -> str:

@@ -1,4 +1,4 @@
-"""Probes, version, metrics, and the pages for people."""
+"""Probes, version, metrics, and the plain pages for people."""
 
 from __future__ import annotations
 
@@ -13,7 +13,6 @@ from service import metrics, pages
 from service.access import ServiceOf
 from service.bodies import refusals
 from service.problems import CATALOGUE, Problem
-from service.routes_runs import PAGE_RUNS, resource
 
 VERSION = version("slackwater")
 
@@ -49,13 +48,6 @@ async def read_version() -> dict[str, str]:
 def read_metrics(service: ServiceOf) -> Response:
     """Numbers for monitoring."""
     return Response(metrics.metrics_text(service), headers={"Content-Type": metrics.MEDIA_TYPE})
-
-
-@router.get("/", response_class=HTMLResponse)
-def front_page(service: ServiceOf) -> HTMLResponse:
-    """The newest runs and their verdicts, for people."""
-    runs = [resource(service, run) for run in service.reader.runs(limit=PAGE_RUNS)]
-    return HTMLResponse(pages.runs_page([(run, service.board.get(run.id)) for run in runs], VERSION))
 
 
 @router.get("/docs", response_class=HTMLResponse)

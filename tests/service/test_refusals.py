@@ -134,15 +134,22 @@ def test_chunked_bodies_are_refused(service: RunningService, run: str) -> None:
 
 @pytest.mark.parametrize("cut", [0, 7, 60, 128, 129, len(GOOD) - 1])
 def test_torn_bodies_leave_nothing(service: RunningService, run: str, cut: int) -> None:
-    before = service.disk(run)
+    before = disk_without_drafts(service, run)
     host, port = service.url.removeprefix("http://").split(":")
     with socket.create_connection((host, int(port)), timeout=5) as connection:
         head = f"PUT /v1/runs/{run}/batches/1 HTTP/1.1\r\nHost: {host}\r\nContent-Length: {len(GOOD)}\r\n"
         connection.sendall(head.encode() + b"Content-Type: application/x-npy\r\n\r\n" + GOOD[:cut])
+    time.sleep(0.02)
+    assert disk_without_drafts(service, run) == before
+
+
+def disk_without_drafts(service: RunningService, run: str) -> dict[str, Any]:
+    """What is on disk once no body is on its way any more; fails when a draft stays."""
     deadline = time.monotonic() + 5
-    while service.disk(run) != before and time.monotonic() < deadline:
+    while any(name.endswith(".part") for name in service.disk(run)["files"]):
+        assert time.monotonic() < deadline, service.disk(run)
         time.sleep(0.02)
-    assert service.disk(run) == before
+    return service.disk(run)
 
 
 def test_unknown_runs(service: RunningService) -> None:

@@ -106,7 +106,12 @@ def long_record_row(n_rows: int = 2000, rank: int = 16, n_snapshots: int = 100_0
             times[start] = seconds
     early = statistics.median(s for k, s in times.items() if 1000 <= k < 1000 + window)
     late = statistics.median(s for k, s in times.items() if k >= n_snapshots - window)
-    return ("block at snapshot 100,000", f"{1e3 * late:.2f} ms", f"at 1,000 {1e3 * early:.2f} ms", f"{late / early:.2f} x")
+    return (
+        "block at snapshot 100,000",
+        f"{1e3 * late:.2f} ms",
+        f"at 1,000 {1e3 * early:.2f} ms",
+        f"{late / early:.2f} x",
+    )
 
 
 def plain_declaration(n_rows: int, rank: int, dtype: str) -> dict[str, object]:

@@ -229,11 +229,10 @@ def _panels(n: int, height_over_width: float) -> tuple[Figure, list[Axes]]:
     """A figure with n panels on top of each other, as high as they need together."""
     width = MAX_WIDTH_INCHES
     height = float(np.clip(0.78 * width * height_over_width + 0.5 + 0.5 * n, MIN_HEIGHT_INCHES, MAX_HEIGHT_INCHES))
-    figure = Figure(figsize=(width, height), layout="constrained", facecolor="white")
+    figure = Figure(figsize=(width, height), layout="compressed", facecolor="white")
     panels = [figure.add_subplot(n, 1, k + 1) for k in range(n)]
     for panel in panels:
         panel.tick_params(labelsize=9)
-        panel.set_anchor("W")
     return figure, panels
 
 

@@ -118,8 +118,10 @@ def check(service: Program, solver: Program) -> None:
 
 
 def look(run: Run, seconds: float) -> Sight:
-    """Read how the run stands."""
+    """Read how the run stands. Raises DemoError when the service has given it up."""
     resource = run.refresh()
+    if resource["status"] == "failed":
+        raise DemoError(f"the run has failed: {resource['reason']}")
     report: ConvergenceReport | None = run.convergence() if resource["n_applied"] else None
     return Sight(
         n_posted=int(resource["n_snapshots"]),

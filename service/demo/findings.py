@@ -34,7 +34,7 @@ class Findings:
 def gather(run: Run, data_directory: Path, picture_directory: Path) -> Findings:
     """Read the last report and draw the leading modes and the mean."""
     declaration = run.refresh()["declaration"]
-    checkpoints = sorted(Folders(data_directory).run(run.id).checkpoints.glob("*.zarr"))
+    checkpoints = sorted(Folders(data_directory).run(run.id).checkpoints.glob("*/fields.zarr"))
     return Findings(
         report=run.convergence(),
         declaration=declaration,
@@ -49,11 +49,11 @@ def draw(run: Run, declaration: RunDeclaration, directory: Path) -> list[Path]:
     pictures: dict[str, bytes] = {}
     mean, modes = run.mean(), run.modes(declaration.criterion.n_modes)
     for k, field in enumerate(declaration.fields):
-        title = f"mean of {field.name}"
-        pictures[f"mean-{field.name}"] = mean_png(mean[k], declaration.grid, title, field.unit)
+        of_mean = f"{run.name}: mean of {field.name}"
+        pictures[f"mean-{field.name}"] = mean_png(mean[k], declaration.grid, of_mean, field.unit)
         for n, mode in enumerate(modes, start=1):
-            title = f"mode {n}, {field.name}"
-            pictures[f"mode-{n}-{field.name}"] = mode_png(mode[k], declaration.grid, title, field.unit)
+            of_mode = f"{run.name}: mode {n} of {field.name}"
+            pictures[f"mode-{n}-{field.name}"] = mode_png(mode[k], declaration.grid, of_mode, field.unit)
     paths = []
     for name, png in sorted(pictures.items()):
         paths.append(directory / f"{name}.png")
@@ -102,4 +102,5 @@ def saving_line(report: ConvergenceReport, seconds: float) -> str:
 def file_lines(found: Findings) -> list[str]:
     """Where the results are."""
     lines = [f"Checkpoint (zarr): {found.checkpoint}"] if found.checkpoint else []
-    return lines + [f"Picture: {path}" for path in found.pictures]
+    names = ", ".join(path.name for path in found.pictures)
+    return [*lines, f"Pictures: {names} in {found.pictures[0].parent}"]

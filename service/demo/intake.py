@@ -12,6 +12,7 @@ from service.threads import fix_blas_threads
 
 fix_blas_threads()  # before anything below imports numpy; the other core is the service's
 
+import sys  # noqa: E402
 from typing import Annotated  # noqa: E402
 
 import typer  # noqa: E402
@@ -24,7 +25,7 @@ from service.demo.duct import (  # noqa: E402
     declaration,
 )
 from service.demo.lattice import MAX_SPEED  # noqa: E402
-from slackwater_client import Client, Run  # noqa: E402
+from slackwater_client import Client, Run, SlackwaterError  # noqa: E402
 
 SNAPSHOTS_PER_POST = 8
 
@@ -64,12 +65,16 @@ def main(
     ] = FIXED_PLAN_SNAPSHOTS,
 ) -> None:
     """Compute the flow through the intake and post it to a service until the modes have settled."""
-    with Client(url) as client:
-        run = client.declare(declaration(run_name))
-        print(f"run {run.id}", flush=True)
-        n_snapshots, advice = solve(run, max_snapshots)
-        run.close()
-        print(f"ended after {n_snapshots} snapshots; advice: {advice}", flush=True)
+    try:
+        with Client(url) as client:
+            run = client.declare(declaration(run_name))
+            print(f"run {run.id}", flush=True)
+            n_snapshots, advice = solve(run, max_snapshots)
+            run.close()
+    except (SlackwaterError, BrokenFlowError) as error:
+        print(f"intake: {error}", file=sys.stderr)
+        raise typer.Exit(1) from error
+    print(f"ended after {n_snapshots} snapshots; advice: {advice}", flush=True)
 
 
 if __name__ == "__main__":

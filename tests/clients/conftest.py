@@ -27,8 +27,9 @@ N_POINTS = 60
 class Service:
     """The service on a port and a data directory of its own; it can be killed and started again."""
 
-    def __init__(self, data_directory: Path) -> None:
+    def __init__(self, data_directory: Path, **environment: str) -> None:
         self.data_directory = data_directory
+        self._environment = environment
         with socket.socket() as taken:
             taken.bind(("127.0.0.1", 0))
             self.port = int(taken.getsockname()[1])
@@ -41,7 +42,10 @@ class Service:
         clean = {name: value for name, value in os.environ.items() if not name.startswith("SLACKWATER_")}
         with self._log.open("ab") as log:
             self._process = subprocess.Popen(
-                [*command, "--data-directory", str(self.data_directory)], stdout=log, stderr=log, env=clean
+                [*command, "--data-directory", str(self.data_directory)],
+                stdout=log,
+                stderr=log,
+                env={**clean, **self._environment},
             )
         if wait:
             self.wait_until_ready()

@@ -17,6 +17,14 @@ class Waiting(Model):
     n_batches: int
 
 
+class ReceiptForecast(Model):
+    """Snapshots still to go, with its interval."""
+
+    estimate: int
+    low: int
+    high: int
+
+
 class RunResource(Model):
     """A run: as declared, and how far it has come."""
 
@@ -34,6 +42,7 @@ class RunResource(Model):
     journal_bytes: int = Field(description="accepted bytes that no checkpoint covers yet")
     verdict: State
     advice: Advice
+    snapshots_to_go: ReceiptForecast | None
 
 
 class RunList(Model):
@@ -46,14 +55,6 @@ class RunChange(Model):
 
     labels: dict[Name, str | bool | int | float] | None = Field(default=None, max_length=64)
     criterion: Criterion | None = Field(default=None, description="only before the first batch")
-
-
-class ReceiptForecast(Model):
-    """Snapshots still to go, with its interval."""
-
-    estimate: int
-    low: int
-    high: int
 
 
 class Receipt(Model):
@@ -98,6 +99,7 @@ class ProblemDocument(Model):
 
 def run_resource(run: RunRecord, published: Published, backlog: Backlog, last_time: float | None) -> RunResource:
     """The run as it stands."""
+    to_go = published.snapshots_to_go
     waiting = Waiting(missing_sequence=run.next_sequence, n_batches=backlog.n_waiting)
     return RunResource.model_construct(
         id=run.id,
@@ -114,6 +116,7 @@ def run_resource(run: RunRecord, published: Published, backlog: Backlog, last_ti
         journal_bytes=backlog.n_bytes,
         verdict=published.verdict,
         advice=published.advice,
+        snapshots_to_go=None if to_go is None else ReceiptForecast.model_validate(to_go),
     )
 
 

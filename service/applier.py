@@ -16,7 +16,9 @@ from service.records import BatchRecord
 from service.registry import Registry
 from service.settings import Settings
 from service.shelf import Shelf
+from streaming.declaration import RunDeclaration
 from streaming.errors import NotReadyError
+from streaming.probes import N_PROBES
 from streaming.report import Convergence, State
 from streaming.stream import SnapshotStream
 
@@ -37,6 +39,12 @@ class Place:
     poison: Poison
 
 
+def memory_needed_bytes(declaration: RunDeclaration) -> int:
+    """Memory of a run that is being applied: basis, open block and probes, in its dtype."""
+    rows = declaration.rank + declaration.length_of_block + N_PROBES
+    return rows * declaration.n_rows * declaration.real_dtype.itemsize
+
+
 class Applier:
     """One run's stream, opened when its first batch is there, and how far it has come."""
 
@@ -47,7 +55,7 @@ class Applier:
         self._shelf = Shelf(
             run_id, self._folder, place.registry, place.reader, place.leases, place.settings.max_checkpoints
         )
-        self._declaration = place.reader.run(run_id).declaration
+        self.declaration = place.reader.run(run_id).declaration
         self._stream: SnapshotStream | None = None
         self._batch: JournalBatch | None = None
         # Batches that an earlier process stored are compared with their digests before they are used.
@@ -72,8 +80,8 @@ class Applier:
 
     def _open(self) -> SnapshotStream:
         if self._stream is None:
-            self._declaration = self._place.reader.run(self.run_id).declaration
-            self._stream = self._shelf.load(self._declaration)
+            self.declaration = self._place.reader.run(self.run_id).declaration
+            self._stream = self._shelf.load(self.declaration)
             self._n_looks = len(self._stream.history)
             self._batch = None
         return self._stream
@@ -84,7 +92,7 @@ class Applier:
         start = stream.n_snapshots - record.first_snapshot
         stop = min(record.n_snapshots, start + stream.room)
         times = None if record.times is None else record.times[start:stop]
-        blocks = stream.absorb(batch.snapshots(start, stop, self._declaration), times)
+        blocks = stream.absorb(batch.snapshots(start, stop, self.declaration), times)
         self._uncovered_bytes += record.n_bytes * (stop - start) // record.n_snapshots
         complete = record.sequence if stop == record.n_snapshots else record.sequence - 1
         self._publish(stream, blocks, complete if complete >= 0 else None)
@@ -174,6 +182,11 @@ class Applier:
         self.release()
         self._folder.record.unlink(missing_ok=True)
         self._place.registry.set_status(self.run_id, "closed")
+
+    @property
+    def memory_bytes(self) -> int:
+        """Memory held now."""
+        return 0 if self._stream is None else memory_needed_bytes(self.declaration)
 
     def release(self) -> None:
         """Let go of the stream; what was applied since the last checkpoint is replayed when it is needed again."""

@@ -9,17 +9,19 @@ from starlette.responses import Response
 from service.arrays import SNAPSHOTS_HEADER
 from service.core import Service
 from service.problems import Problem
-from service.results import Numbers, Source, newest
+from service.results import Numbers, Source, chosen, newest
 from service.shelf import load_array
 
 _drawing = threading.Lock()  # the drawing library is not made for several threads, and one picture fills a core
 
 
-def mode_picture(service: Service, run_id: str, mode: int, field: str | None) -> Response:
+def mode_picture(
+    service: Service, run_id: str, mode: int, field: str | None, checkpoint: int | None = None
+) -> Response:
     """One field of one mode (counted from 1) as a PNG. Raises the 404 and 422 problems."""
     from service.pictures import mode_png
 
-    with newest(service, run_id) as source, _drawing:
+    with chosen(service, run_id, checkpoint) as source, _drawing:
         source.check_count("k", mode)
         index = _field_index(source, field)
         spec = source.declaration.fields[index]

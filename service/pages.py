@@ -7,6 +7,7 @@ from typing import Any
 
 from service.problems import CATALOGUE
 
+
 def page(title: str, body: str) -> str:
     """A whole document; its style is a file of its own, since the pages allow none inside."""
     return (

@@ -21,6 +21,9 @@ from service.problems import Problem
 from service.records import BATCH_COLUMNS, RUN_COLUMNS, BatchRecord, RunRecord, batch_from, one, run_from
 from service.schema import SCHEMA_VERSION, TABLES
 
+# Events of runs that are kept number some hundreds each; those of deleted runs must not add up for ever.
+MAX_EVENTS = 1_000_000
+
 
 class RegistryError(RuntimeError):
     """The registry file cannot be used; the message names it."""
@@ -126,6 +129,7 @@ class Registry:
                 db.execute(f"DELETE FROM {table} WHERE run = ?", (run_id,))
             db.execute("DELETE FROM runs WHERE id = ?", (run_id,))
             add_event(db, run_id, "deleted", {})
+            db.execute("DELETE FROM events WHERE id <= (SELECT max(id) FROM events) - ?", (MAX_EVENTS,))
 
     # -- what the worker finds out ------------------------------------------------------------------------
 

@@ -71,6 +71,16 @@ def newest(service: Service, run_id: str) -> Iterator[Source]:
         service.leases.give_back(run_id, source.n_snapshots)
 
 
+@contextmanager
+def chosen(service: Service, run_id: str, checkpoint: int | None) -> Iterator[Source]:
+    """Hold the checkpoint at so many snapshots in place, or the newest. Raises the 404 problems."""
+    source = take_newest(service, run_id) if checkpoint is None else take(service, run_id, checkpoint)
+    try:
+        yield source
+    finally:
+        service.leases.give_back(run_id, source.n_snapshots)
+
+
 def take_newest(service: Service, run_id: str) -> Source:
     """Like `newest`, for answers that outlive the handler; the caller gives the lease back."""
     run = service.reader.run(run_id)

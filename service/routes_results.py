@@ -16,7 +16,7 @@ from service.arrays import SNAPSHOTS_HEADER, array_response, json_text, streamed
 from service.bodies import NPY, array_answer, refusals
 from service.drawing import mean_picture, mode_picture
 from service.problems import Problem
-from service.results import newest, take, take_newest
+from service.results import chosen, newest, take, take_newest
 from service.waits import MAX_WAIT_SECONDS, wait_until
 from streaming.report import Convergence, State
 
@@ -26,6 +26,10 @@ Accept = Annotated[str | None, Header(description="application/x-npy, or applica
 Number = Annotated[int, Path(ge=1, description="number of the mode, from 1")]
 Count = Annotated[int | None, Query(ge=1, description="how many modes; all that are kept by default")]
 FieldName = Annotated[str | None, Query(max_length=120, description="which field; the first by default")]
+Checkpoint = Annotated[
+    int | None, Query(ge=0, le=10**12, description="read from the checkpoint at so many snapshots; newest by default")
+]
+Last = Annotated[int | None, Query(ge=1, description="only so many of the newest snapshots")]
 
 
 @router.get(
@@ -97,20 +101,29 @@ def read_modes(run_id: str, service: ServiceOf, n: Count = None, accept: Accept 
     response_class=Response,
     responses={200: {"description": "picture of one field", "content": {"image/png": {}}}, **refusals(404, 422)},
 )
-def draw_mode(run_id: str, k: Number, service: ServiceOf, field: FieldName = None) -> Response:
+def draw_mode(
+    run_id: str, k: Number, service: ServiceOf, field: FieldName = None, checkpoint: Checkpoint = None
+) -> Response:
     """A picture of one mode on its grid or points."""
-    return mode_picture(service, run_id, k, field)
+    return mode_picture(service, run_id, k, field, checkpoint)
 
 
 @router.get(
     "/modes/{k}",
     responses={**array_answer("(n_fields, n_points), in field units", picture=True), **refusals(404, 406, 422)},
 )
-def read_mode(run_id: str, k: Number, service: ServiceOf, field: FieldName = None, accept: Accept = None) -> Response:
+def read_mode(
+    run_id: str,
+    k: Number,
+    service: ServiceOf,
+    field: FieldName = None,
+    checkpoint: Checkpoint = None,
+    accept: Accept = None,
+) -> Response:
     """One mode."""
     if wants(accept, NPY, "application/octet-stream", "application/json", "image/png") == "image/png":
-        return mode_picture(service, run_id, k, field)
-    with newest(service, run_id) as source:
+        return mode_picture(service, run_id, k, field, checkpoint)
+    with chosen(service, run_id, checkpoint) as source:
         source.check_count("k", k)
         values = np.stack(list(source.pieces(range(k - 1, k))))
         return array_response(values, accept, source.n_snapshots)
@@ -150,14 +163,23 @@ def read_singular_values(run_id: str, service: ServiceOf, accept: Accept = None)
     "/coefficients",
     responses={**array_answer("(n_snapshots, n); as JSON the times come with them"), **refusals(404, 406, 422)},
 )
-def read_coefficients(run_id: str, service: ServiceOf, n: Count = None, accept: Accept = None) -> Response:
+def read_coefficients(
+    run_id: str,
+    service: ServiceOf,
+    n: Count = None,
+    last: Last = None,
+    checkpoint: Checkpoint = None,
+    accept: Accept = None,
+) -> Response:
     """Temporal coefficients of the leading modes; their times are at ``/times``."""
-    with newest(service, run_id) as source:
+    with chosen(service, run_id, checkpoint) as source:
         count = source.check_count("n", n or source.n_modes)
-        values = np.asarray(source.array("coefficient")[:, :count])
+        stored = source.array("coefficient")
+        first = max(0, stored.shape[0] - last) if last else 0
+        values = np.asarray(stored[first:, :count])
         if wants(accept, NPY, "application/octet-stream", "application/json") != "application/json":
             return array_response(values, accept, source.n_snapshots)
-        times = json_text(np.asarray(source.array("time")[...]))
+        times = json_text(np.asarray(source.array("time")[first:]))
         text = f'{{"times": {times}, "coefficients": {json_text(values)}}}'
         headers = {SNAPSHOTS_HEADER: str(source.n_snapshots)}
         return Response(text, media_type="application/json", headers=headers)

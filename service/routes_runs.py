@@ -12,6 +12,7 @@ from fastapi import APIRouter, Header, Query, Request, Response
 
 from service.access import ServiceOf
 from service.answers import RunChange, RunList, RunResource, run_resource
+from service.applier import memory_needed_bytes
 from service.bodies import npy_body, refusals
 from service.commit import check_open
 from service.core import Service
@@ -36,7 +37,7 @@ CLOSE_WAIT_SECONDS = 10.0  # most closes end sooner, and the caller then has the
 def declare_run(declaration: RunDeclaration, response: Response, service: ServiceOf) -> RunResource:
     """Declare a run. The answer is the whole run, and Location its address."""
     service.poison.check()
-    _check_memory(declaration, service.settings.run_memory_bytes)
+    _check_memory(declaration, service.settings.memory_bytes)
     _check_names(declaration)
     run_id = _new_id(declaration.name)
     service.folders.run(run_id).create(service.poison)
@@ -209,14 +210,13 @@ def resource(service: Service, run: RunRecord) -> RunResource:
 
 
 def _check_memory(declaration: RunDeclaration, limit_bytes: int) -> None:
-    rows = declaration.rank + declaration.length_of_block + N_PROBES
-    needed = rows * declaration.n_rows * declaration.real_dtype.itemsize
+    needed = memory_needed_bytes(declaration)
     if needed > limit_bytes:
         raise Problem(
             "run-too-large",
             f"(rank {declaration.rank} + block {declaration.length_of_block} + {N_PROBES} probes) x "
             f"{declaration.n_rows} rows need {needed} bytes of memory, {limit_bytes} are allowed for a run; lower "
-            "retained_rank or block_length, use float32, or raise the setting run_memory_bytes",
+            "retained_rank or block_length, use float32, or raise the setting memory_bytes",
             needed_bytes=needed,
             limit=limit_bytes,
         )

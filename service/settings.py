@@ -51,8 +51,9 @@ class Settings(BaseSettings):
     # Event streams and long polls each hold a connection.
     max_event_streams: int = Field(default=64, ge=1)
     max_waits: int = Field(default=256, ge=1)
-    # Memory of one run's basis and open block: by default half of what this machine has.
-    run_memory_bytes: int = Field(default_factory=lambda: physical_memory_bytes() // 2, ge=MIB)
+    # Memory of the bases and open blocks of all runs that are being applied: by default half of what this machine
+    # has. A run that needs more alone is refused; runs that rest give way, and come back from their checkpoints.
+    memory_bytes: int = Field(default_factory=lambda: physical_memory_bytes() // 2, ge=MIB)
     # Each kept checkpoint holds R m numbers.
     max_checkpoints: int = Field(default=12, ge=3)
     # Largest share of the worker's time spent on checkpoints that nothing forces.

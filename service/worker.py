@@ -10,7 +10,7 @@ import errno
 import logging
 import threading
 
-from service.applier import Applier, Place
+from service.applier import Applier, Place, memory_needed_bytes
 from service.journal import JournalError
 from service.problems import Problem
 from streaming.errors import StreamError
@@ -32,7 +32,6 @@ class Worker(threading.Thread):
         self._forget: set[str] = set()
         self._appliers: dict[str, Applier] = {}
         self._stopping = False
-        self.n_steps = 0
 
     # -- called by other threads --------------------------------------------------------------------------
 
@@ -99,10 +98,10 @@ class Worker(threading.Thread):
     def _step(self, run_id: str) -> bool:
         """One turn of a run; True when it wants another."""
         try:
-            applier = self._appliers.get(run_id)
-            if applier is None:
-                applier = self._appliers[run_id] = Applier(run_id, self._place)
-            self.n_steps += 1
+            applier = self._appliers.pop(run_id, None) or Applier(run_id, self._place)
+            self._appliers[run_id] = applier  # last in the order of use
+            if not self._has_room(run_id, memory_needed_bytes(applier.declaration) - applier.memory_bytes):
+                return True  # those at work have the memory; this one comes when they rest
             return applier.step()
         except Problem as problem:
             return self._storage_trouble(run_id, problem.detail) if problem.kind != "unknown-run" else False
@@ -118,6 +117,20 @@ class Worker(threading.Thread):
             logger.exception("run %s failed", run_id)
             self._fail(run_id, f"the computation failed ({type(error).__name__}); see the log of the service")
         return False
+
+    def _has_room(self, run_id: str, coming_bytes: int) -> bool:
+        """Let go of the runs that have been at rest for longest, as far as the one at work needs their memory.
+
+        A run with something to apply keeps what it has: letting go of it would cost a replay at each of its turns.
+        """
+        held = coming_bytes + sum(applier.memory_bytes for applier in self._appliers.values())
+        for other, applier in self._appliers.items():
+            if held <= self._place.settings.memory_bytes:
+                break
+            if other != run_id and other not in self._ready:
+                held -= applier.memory_bytes
+                applier.release()
+        return coming_bytes == 0 or held == coming_bytes or held <= self._place.settings.memory_bytes
 
     def _storage_trouble(self, run_id: str, reason: str) -> bool:
         """Start the run over from its last checkpoint once the disk works again; never after a failed sync."""

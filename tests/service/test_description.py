@@ -4,12 +4,15 @@ from __future__ import annotations
 
 from pathlib import Path
 
+import pytest
 from fastapi.routing import iter_route_contexts
 
 from service.app import create_app
 from service.core import Service
 from service.settings import Settings
 from tests.service.serving import RunningService
+
+pytestmark = pytest.mark.timeout(60)  # a hang is a failure, and shows its stacks
 
 
 def test_every_route_is_described(service: RunningService, tmp_path: Path) -> None:

@@ -22,6 +22,8 @@ from service.shapes import expect_batch
 from streaming.declaration import RunDeclaration
 from tests.service.serving import RunningService, check_problem, declaration, npy, snapshots
 
+pytestmark = pytest.mark.timeout(60)  # a hang is a failure, and shows its stacks
+
 BODY = npy(snapshots(0, 3))
 
 

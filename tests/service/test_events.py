@@ -3,9 +3,14 @@
 from __future__ import annotations
 
 import json
+import time
 from typing import Any
 
+import pytest
+
 from tests.service.serving import RunningService, check_problem, snapshots
+
+pytestmark = pytest.mark.timeout(60)  # a hang is a failure, and shows its stacks
 
 
 def read(service: RunningService, path: str, count: int, headers: dict[str, str] | None = None) -> list[Any]:
@@ -13,7 +18,9 @@ def read(service: RunningService, path: str, count: int, headers: dict[str, str]
     events, current = [], {}
     with service.client.stream("GET", path, headers=headers) as stream:
         assert stream.headers["content-type"].startswith("text/event-stream")
+        deadline = time.monotonic() + 20
         for line in stream.iter_lines():
+            assert time.monotonic() < deadline, (events, service.log)
             name, _, value = line.partition(": ")
             if line == "" and "id" in current:
                 events.append((int(current["id"]), current["event"], json.loads(current["data"])))

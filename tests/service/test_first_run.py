@@ -8,11 +8,14 @@ from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
+import pytest
 import zarr
 
 from streaming import Convergence, SnapshotStream
 from streaming.checkpoint import STORE
 from tests.service.serving import RunningService, declaration, npy, snapshots
+
+pytestmark = pytest.mark.timeout(60)  # a hang is a failure, and shows its stacks
 
 N = 120
 

@@ -16,6 +16,8 @@ import pytest
 from service.problems import CATALOGUE
 from tests.service.serving import NPY, RunningService, check_problem, declaration, npy, snapshots
 
+pytestmark = pytest.mark.timeout(60)  # a hang is a failure, and shows its stacks
+
 
 @pytest.fixture(scope="module")
 def run(service: RunningService) -> str:

@@ -5,8 +5,11 @@ from __future__ import annotations
 from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
+import pytest
 
 from tests.service.serving import NPY, RunningService, check_problem, npy, snapshots
+
+pytestmark = pytest.mark.timeout(60)  # a hang is a failure, and shows its stacks
 
 
 def test_a_repeat_changes_nothing(service: RunningService) -> None:

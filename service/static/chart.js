@@ -1,0 +1,65 @@
+// What all charts share: colours taken from the style sheet, a frame that follows its width, and words for those who
+// do not see it.
+
+import uPlot from "./vendor/uPlot.esm.js";
+import { h } from "./elements.js";
+
+export function colour(name) {
+  return getComputedStyle(document.documentElement).getPropertyValue(`--${name}`).trim();
+}
+
+export const SERIES = ["series-1", "series-2", "series-3", "series-4", "series-5", "series-6"];
+
+export function axis(label, extra = {}) {
+  const size = parseFloat(getComputedStyle(document.documentElement).fontSize);
+  const font = `${Math.round(0.8 * size)}px system-ui, sans-serif`;
+  return { label, font, labelFont: font, labelSize: 1.6 * size, stroke: () => colour("ink"),
+    grid: { stroke: () => colour("rule"), width: 1 }, ticks: { stroke: () => colour("rule"), width: 1 }, ...extra };
+}
+
+// A chart that is made once and then given new data; `options(width)` is asked anew when series or colours change.
+export class Chart {
+  #plot = null;
+  #key = null;
+  #make = null;
+  #data = null;
+
+  constructor(kind, ratio) {
+    this.ratio = ratio;
+    this.frame = h("div", { class: `chart ${kind}`, role: "img" });
+    this.#watch = new ResizeObserver(() => this.#fit());
+    this.#watch.observe(this.frame);
+  }
+
+  #watch;
+
+  // `key` says which series there are: while it stays the same only the data are replaced.
+  show(key, make, data, words) {
+    this.frame.setAttribute("aria-label", words);
+    [this.#make, this.#data] = [make, data];
+    if (this.#plot && key === this.#key) { this.#plot.setData(data); return; }
+    this.#key = key;
+    this.redraw();
+  }
+
+  redraw() {
+    if (!this.#make || !this.frame.clientWidth) return;
+    this.#plot?.destroy();
+    this.#plot = new uPlot({ ...this.#make(), ...this.#size() }, this.#data, this.frame);
+  }
+
+  end() {
+    this.#watch.disconnect();
+    this.#plot?.destroy();
+  }
+
+  #size() {
+    const width = this.frame.clientWidth;
+    return { width, height: Math.round(Math.min(width * this.ratio, 0.7 * innerHeight)) };
+  }
+
+  #fit() {
+    if (!this.#plot) this.redraw();
+    else if (Math.abs(this.#plot.width - this.frame.clientWidth) > 1) this.#plot.setSize(this.#size());
+  }
+}

@@ -13,7 +13,7 @@ from streaming.verdict import ANGLE, Finding
 MIN_BLOCKS = 16  # fewer leave the variances with so few degrees of freedom that bounds mean little
 
 # Independent samples below which first-order bounds on angles fall short of their confidence.
-MIN_EFFECTIVE_SAMPLES = 50
+MIN_EFFECTIVE_SAMPLES = 100
 
 # Variance with longer blocks against the variance used; beyond, a block is shorter than the memory of the flow.
 MAX_PLATEAU = 1.5

@@ -68,6 +68,13 @@ class Moments:
         )
         return Moments(**{**kept.__dict__, "mean_energy": kept.window_mean_energy()})
 
+    def whole_blocks(self) -> Moments:
+        """Leave out a last block that holds less than half of the others, too short to compare with them."""
+        if self.n_blocks < 2 or 2 * self.counts[-1] >= self.counts[0]:
+            return self
+        kept = {name: getattr(self, name)[:-1] for name in ("counts", "means", "scatters", "energies", "times")}
+        return Moments(**{**self.__dict__, **kept})
+
     def window_mean_energy(self) -> float:
         """|mean of y|^2 over these blocks: the part in the basis, and the probes' estimate of the rest."""
         mean = self.counts @ self.means / self.counts.sum()

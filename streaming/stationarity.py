@@ -14,7 +14,7 @@ from streaming.moments import Moments
 Array = npt.NDArray[np.float64]
 
 MIN_BLOCKS = 8  # fewer values per half give the tests nothing to go by
-STARTUP_LEVEL = 0.001  # a stationary record loses blocks to the start-up test in about this share of looks
+STARTUP_LEVEL = 0.001  # chance that a stationary record loses its first blocks at a look; they are lost for little
 DRIFT_LEVEL = 0.005  # a false alarm only delays the verdict until a later look
 
 
@@ -53,35 +53,60 @@ def mser(series: Array) -> int:
 
 
 def find_startup(moments: Moments, n_modes: int) -> Startup:
-    """Find the start-up on total energy, leading means and leading variances of the blocks."""
-    if moments.n_blocks < MIN_BLOCKS:
+    """Find the start-up on total energy, leading means and leading variances of the blocks.
+
+    The rule of `mser` proposes a cut for each series; it is made where the part before it differs from the second
+    half of the record by more than chance, so that a stationary record is left whole.
+    """
+    series = _startup_series(moments.whole_blocks(), n_modes)
+    n_blocks, n_series = series.shape
+    if n_blocks < MIN_BLOCKS:
         return Startup(0, False)
-    series = _startup_series(moments, n_modes)
     first, in_doubt = 0, False
     for values in series.T:
         cut = mser(values)
-        if cut and _differs(values, min(cut, len(values) // 2), STARTUP_LEVEL / series.shape[1]):
-            in_doubt |= cut > len(values) // 2
-            first = max(first, min(cut, len(values) // 2))
+        within = min(cut, n_blocks // 2)
+        if cut and p_value_of_start(values, within) < STARTUP_LEVEL / n_series:
+            in_doubt |= cut > n_blocks // 2
+            first = max(first, within)
     return Startup(first, in_doubt)
 
 
 def _startup_series(moments: Moments, n_modes: int) -> Array:
-    """Block means of |y|^2 and of the leading coordinates, and the variances of these, (B, n)."""
+    """Logarithms of block energies and leading variances, and leading means, (B, n); logarithms for their skew."""
     n = min(n_modes, moments.rank)
     variances = np.einsum("bii->bi", moments.scatters[:, :n, :n]) / moments.counts[:, None]
-    return np.concatenate([moments.block_energies()[:, None], variances, moments.means[:, :n]], axis=1)
+    positive = np.concatenate([moments.block_energies()[:, None], variances], axis=1)
+    floor = np.maximum(1e-12 * positive.max(axis=0, initial=0.0), np.finfo(np.float64).tiny)
+    return np.concatenate([np.log(np.maximum(positive, floor)), moments.means[:, :n]], axis=1)
 
 
-def _differs(values: Array, cut: int, level: float) -> bool:
-    """Whether the first values lie outside what the second half of the series does."""
+def p_value_of_start(values: Array, cut: int) -> float:
+    """Two-sided p-value of the first ``cut`` values against the second half of the series (b,), by Student's t.
+
+    The correlation of neighbours, taken from the second half, makes both means less certain.
+    """
     reference = values[len(values) // 2 :]
     spread = float(reference.std(ddof=1))
-    deviation = float(np.abs(values[:cut].mean() - reference.mean()))
-    if spread == 0.0:
-        return deviation > 0.0
-    error = spread * np.sqrt(1.0 / cut + 1.0 / len(reference))
-    return bool(2 * student.sf(deviation / error, len(reference) - 1) < level)
+    deviation = abs(float(values[:cut].mean() - reference.mean()))
+    if spread <= 1e-12 * abs(float(reference.mean())):
+        return 0.0 if deviation > spread else 1.0
+    memory = _memory(reference)
+    error = spread * np.sqrt(memory * (1.0 / cut + 1.0 / len(reference)))
+    return float(2.0 * student.sf(deviation / error, max(len(reference) / memory - 1.0, 1.0)))
+
+
+def _memory(values: Array) -> float:
+    """(1 + r) / (1 - r) with r the correlation of neighbours: values per independent one of an AR(1) series.
+
+    References
+    ----------
+    Bayley & Hammersley (1946), J. R. Stat. Soc. Suppl. 8, 184 (from memory).
+    """
+    offsets = values - values.mean()
+    correlation = float(offsets[1:] @ offsets[:-1]) / float(offsets @ offsets)
+    bounded = min(max(correlation, 0.0), 0.9)
+    return (1.0 + bounded) / (1.0 - bounded)
 
 
 def find_drift(modal: ModalMoments, n_modes: int) -> Drift:
@@ -93,7 +118,8 @@ def find_drift(modal: ModalMoments, n_modes: int) -> Drift:
     moments = modal.scores[:, rows, columns] / modal.shares[:, None]
     energies = modal.block_energies[:, None]
     series = np.concatenate([energies, modal.means[:, :n], moments], axis=1)
-    series = series.reshape(len(series), -1)
+    if 2 * modal.shares[-1] < modal.shares[0]:  # a short last block would weigh as much as the others
+        series = series[:-1]
     half = len(series) // 2
     p_values = half_against_half(series[:half], series[len(series) - half :])
     p_value = min(1.0, float(p_values.min()) * len(p_values))

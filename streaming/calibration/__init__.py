@@ -1,0 +1,1 @@
+"""Trials of the stopping rule on random processes whose modes are known."""

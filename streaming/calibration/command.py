@@ -1,0 +1,88 @@
+"""The command ``slackwater calibrate``: trials of the stopping rule on processes whose modes are known."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from concurrent.futures import ProcessPoolExecutor, as_completed
+from multiprocessing import get_context
+from typing import Annotated
+
+import typer
+from rich.console import Console
+from rich.progress import Progress
+from rich.table import Table
+
+from streaming.calibration.processes import PROCESSES
+from streaming.calibration.summary import Share, Summary, summarise
+from streaming.calibration.trial import Trial, run_trial
+
+MAX_RUNS = 10_000
+MAX_JOBS = 64
+
+
+def register(app: typer.Typer) -> None:
+    """Add the command to a Typer application."""
+    app.command("calibrate")(calibrate)
+
+
+def calibrate(
+    runs: Annotated[int, typer.Option(min=1, max=MAX_RUNS, help="Trials of each process.")] = 60,
+    seed: Annotated[int, typer.Option(min=0, help="Seed of the first trial; the others count up from it.")] = 0,
+    process: Annotated[list[str] | None, typer.Option(help="Process to try; may be given again.")] = None,
+    jobs: Annotated[int, typer.Option(min=1, max=MAX_JOBS, help="Trials at the same time.")] = 2,
+    max_angle_deg: Annotated[float, typer.Option(min=0.1, max=45.0, help="Tolerated misalignment.")] = 10.0,
+) -> None:
+    """Try the stopping rule on random flows whose modes are known, and count how often it stops too early.
+
+    The oracle knows the true modes and stops at the first of two looks in a row within tolerance. The naive rule stops
+    when the modes change by less than the tolerance between looks, twice in a row.
+    """
+    names = process or list(PROCESSES)
+    unknown = sorted(set(names) - set(PROCESSES))
+    if unknown:
+        raise typer.BadParameter(f"no process {', '.join(unknown)}; there are {', '.join(PROCESSES)}")
+    table = _empty_table(runs, max_angle_deg)
+    with Progress(console=Console(stderr=True), transient=True) as progress:
+        task = progress.add_task("trials", total=runs * len(names))
+        for name in names:
+            trials = []
+            for trial in _trials(name, range(seed, seed + runs), jobs, max_angle_deg):
+                trials.append(trial)
+                progress.advance(task)
+            _add_row(table, name, summarise(trials))
+    Console().print(table)
+
+
+def _trials(name: str, seeds: range, jobs: int, max_angle_deg: float) -> Iterator[Trial]:
+    if jobs == 1:
+        yield from (run_trial(name, seed, max_angle_deg) for seed in seeds)
+        return
+    with ProcessPoolExecutor(jobs, mp_context=get_context("spawn")) as pool:
+        for future in as_completed([pool.submit(run_trial, name, seed, max_angle_deg) for seed in seeds]):
+            yield future.result()
+
+
+def _empty_table(runs: int, max_angle_deg: float) -> Table:
+    table = Table(title=f"{runs} trials each, tolerance {max_angle_deg:g} deg, 95 % confidence")
+    for heading in ("process", "stopped", "false stops", "coverage", "median stop", "stop / oracle", "naive false"):
+        table.add_column(heading, justify="left" if heading == "process" else "right")
+    return table
+
+
+def _add_row(table: Table, name: str, summary: Summary) -> None:
+    table.add_row(
+        name,
+        f"{summary.n_stopped}/{summary.n_trials}",
+        _percent(summary.false_stops),
+        f"{100 * summary.coverage.fraction:.1f} %",
+        "-" if summary.median_stop is None else f"{summary.median_stop:.0f}",
+        "-" if summary.ratio is None else f"{summary.ratio:.2f}",
+        _percent(summary.naive_false_stops),
+    )
+
+
+def _percent(share: Share) -> str:
+    if share.number == 0:
+        return "-"
+    low, high = share.interval()
+    return f"{100 * share.fraction:.1f} % [{100 * low:.1f}, {100 * high:.1f}]"

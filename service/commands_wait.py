@@ -7,12 +7,14 @@ import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from enum import IntEnum
+from pathlib import Path
 from typing import Annotated, Any
 
 import typer
 from rich.console import Console
 from rich.text import Text
 
+from service import stop_file
 from service.verdict_text import STYLE_OF_STATE, headline
 from slackwater_client import (
     Client,
@@ -77,6 +79,9 @@ Ends when they have, when the run is closed or has failed, or after --timeout se
 7  the service cannot be reached
 8  no such run
 
+With --touch FILE the file is left there when, and only when, the code is 0: a solver that looks for a stop file
+then ends itself in good order. It is written beside and renamed, and holds one line of text.
+
 It advises a person or a batch script; do not wire it to an interlock.
 """
 
@@ -91,7 +96,7 @@ def failures_end_with_codes() -> Iterator[None]:
     """Turn errors of the client into one line on standard error and an exit code."""
     try:
         yield
-    except (SlackwaterError, ValueError) as error:
+    except (SlackwaterError, ValueError, OSError) as error:
         print(f"slackwater: {error}", file=sys.stderr)
         raise typer.Exit(_code_of(error)) from error
 
@@ -112,14 +117,24 @@ def wait(
         float,
         typer.Option(min=0.0, help="Seconds the service may be away in the middle, as for a restart."),
     ] = 60.0,
+    touch: Annotated[
+        Path | None, typer.Option(metavar="FILE", help="Leave this stop file when the modes have settled.")
+    ] = None,
+    touch_text: Annotated[
+        str | None, typer.Option(metavar="TEXT", help="What the stop file holds; the verdict when not given.")
+    ] = None,
     as_json: Json = False,
     quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing; the exit code says it all.")] = False,
 ) -> None:
     with failures_end_with_codes(), Client(url) as client:
+        if touch is not None:
+            stop_file.check_place(touch)
         found = client.run(run)
         limit = float("inf") if timeout is None else timeout
         report = _followed(found, limit, patience, show=not quiet)
         code = exit_code(str(found.resource["status"]), report["verdict"]["state"])
+        if touch is not None and code is Exit.SETTLED:
+            stop_file.leave(touch, touch_text or f"{found.name}: {headline(report, found.declaration)}")
         if not quiet:
             print(_json_text(found, report, code) if as_json else _last_words(found, report))
     raise typer.Exit(code)

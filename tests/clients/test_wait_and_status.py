@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -108,6 +109,31 @@ def test_wait_gives_json_for_scripts(slackwater: Command, settled_run: str) -> N
 def test_quiet_prints_nothing(slackwater: Command, settled_run: str) -> None:
     done = slackwater("wait", settled_run, "--quiet")
     assert (done.exit_code, done.output) == (0, "")
+
+
+def test_wait_leaves_the_stop_file_when_settled(slackwater: Command, settled_run: str, tmp_path: Path) -> None:
+    stop = tmp_path / "STOP"
+    stop.write_text("left over from the last job, and longer than what comes now" * 9)
+    assert slackwater("wait", settled_run, "--touch", str(stop)).exit_code == 0
+    assert stop.read_text().startswith("flap [root]: settled · 2,000 snapshots")
+    assert [path.name for path in tmp_path.iterdir()] == ["STOP"]
+    assert slackwater("wait", settled_run, "--touch", str(stop), "--touch-text", "stop at next write").exit_code == 0
+    assert stop.read_text() == "stop at next write\n"
+
+
+def test_wait_leaves_no_stop_file_otherwise(
+    slackwater: Command, client: Client, declaration: dict[str, Any], tmp_path: Path
+) -> None:
+    run = client.declare(declaration)
+    assert slackwater("wait", run.id, "--timeout", "0.1", "--touch", str(tmp_path / "STOP")).exit_code == 3
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_stop_file_without_a_place_is_refused_before_the_wait(slackwater: Command, tmp_path: Path) -> None:
+    done = slackwater("wait", "no-such-run", "--touch", str(tmp_path / "missing" / "STOP"))
+    assert done.exit_code == 1
+    assert "is no directory" in done.stderr
+    assert slackwater("wait", "no-such-run", "--touch", str(tmp_path)).exit_code == 1
 
 
 def test_wait_ends_with_3_when_time_is_over(

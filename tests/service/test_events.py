@@ -60,11 +60,3 @@ def test_metrics_count(service: RunningService) -> None:
     values = dict(line.rsplit(" ", 1) for line in answer.text.splitlines() if not line.startswith("#"))
     assert int(values["slackwater_batches_stored_total"]) >= 1
     assert answer.text.endswith("# EOF\n")
-
-
-def test_the_front_page_shows_runs_and_cautions(service: RunningService) -> None:
-    run = service.declare(name="<b>duct</b>")
-    page = service.client.get("/").text
-    assert f"/v1/runs/{run}" in page
-    assert "&lt;b&gt;duct&lt;/b&gt;" in page
-    assert "a person stops the machine" in page

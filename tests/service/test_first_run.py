@@ -61,7 +61,7 @@ def test_the_service_gives_the_bits_of_the_engine(service: RunningService) -> No
 
 def test_modes_agree_with_a_dense_svd(service: RunningService) -> None:
     """Oracle: numpy.linalg.svd of the whole record; the two strong patterns are far above the noise."""
-    run = service.declare()
+    run = service.declare(criterion={"n_modes": 2, "startup": "keep"})  # the whole record, as the oracle has it
     post_all(service, run, [0, 60, N])
     service.client.post(f"/v1/runs/{run}/close")
     rows = snapshots(0, N).reshape(N, 96).astype(float)

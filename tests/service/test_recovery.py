@@ -104,7 +104,7 @@ def test_restart_without_a_checkpoint(tmp_path: Path) -> None:
 
 def test_a_damaged_checkpoint_is_made_again(tmp_path: Path) -> None:
     data = tmp_path / "data"
-    with RunningService(data) as service:
+    with RunningService(data, environment={"SLACKWATER_CHECKPOINT_SHARE": "1"}) as service:  # one at each look
         run = service.declare()
         for sequence in range(20):
             service.put(

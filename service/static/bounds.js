@@ -54,9 +54,8 @@ export function boundOptions(found, current) {
   const limit = { label: "Tolerance", stroke: () => colour("ink"), width: 2, points: { show: false },
     value: (_, v) => (v === null ? "–" : `${digits(v)} deg`) };
   return {
-    scales: { x: { time: false, distr: 3, range: wholeRange }, y: { distr: 3, range: (_, low, high) => roomy(low, high) } },
-    axes: [axis("snapshots in the basis", { values: (_, ticks) => ticks.map(tick) }),
-      axis("misalignment bound, deg", { values: (_, ticks) => ticks.map(tick) })],
+    scales: { x: { time: false, distr: 3, range: wholeRange }, y: { distr: 3, range: roomy } },
+    axes: [logAxis("snapshots in the basis"), logAxis("misalignment bound, deg")],
     series: [{ label: "Snapshots", value: (_, v) => (v === null ? "–" : count(v)) }, ...series, limit],
     hooks: { draw: [(plot) => drawForecast(plot, current())] },
   };
@@ -66,18 +65,26 @@ function wholeRange(_, low, high) {
   return low === null ? [10, 1000] : [low / 1.08, Math.max(high * 1.08, low * 2)];
 }
 
-function roomy(low, high) {
-  return low === null ? [1, 90] : [Math.min(low / 1.25, low), Math.min(180, high * 1.25)];
+function roomy(_, low, high) {
+  return low === null ? [1, 90] : [low / 1.4, Math.min(180, high * 1.25)];
 }
 
-// 1, 2, 5 of each decade are enough to read a logarithmic axis
-function tick(value) {
-  if (value === null) return "";
-  const lead = Number(value.toExponential(0)[0]);
-  return [1, 2, 5].includes(lead) ? count(value).length > 1 || value >= 1 ? shortCount(value) : digits(value) : "";
+function logAxis(label) {
+  return axis(label, { splits: (_, index, low, high) => marks(low, high), values: (_, ticks) => ticks.map(short),
+    filter: (_, ticks) => ticks });
 }
 
-function shortCount(value) {
+// 1, 2, 5 of each decade are enough to read a logarithmic axis, and 1 alone over many decades; pure.
+export function marks(low, high) {
+  const leads = high / low > 2e3 ? [1] : high / low < 12 ? [1, 1.5, 2, 3, 4, 5, 7] : [1, 2, 5];
+  const found = [];
+  for (let decade = Math.floor(Math.log10(low)); decade <= Math.log10(high); decade += 1) {
+    found.push(...leads.map((lead) => Number(`${lead}e${decade}`)).filter((mark) => mark >= low && mark <= high));
+  }
+  return found;
+}
+
+function short(value) {
   return value >= 1e6 ? `${digits(value / 1e6)}M` : value >= 1e4 ? `${digits(value / 1e3)}k` : digits(value);
 }
 

@@ -106,10 +106,16 @@ export function summaryOf(runs) {
   const drifting = runs.filter((run) => run.verdict === "drifting").map(named);
   const unfinished = runs.filter((run) => run.verdict !== "settled" && run.status !== "failed");
   const next = unfinished.filter((run) => run.status === "open")
-    .sort((a, b) => (a.snapshots_to_go?.estimate ?? Infinity) - (b.snapshots_to_go?.estimate ?? Infinity))[0];
+    .sort((a, b) => farFrom(a) - farFrom(b))[0];
   const again = unfinished.filter((run) => run.status !== "open").map(named);
   return [`${settled.length} of ${runs.length} settled.`,
     drifting.length ? `Drifting: ${drifting.join(", ")}.` : "",
     next ? `Go on with ${named(next)}.` : "",
     again.length ? `Ended too early: ${again.join(", ")}.` : ""].filter(Boolean).join(" ");
+}
+
+// Judged points come before those that still gather, and those before the ones that have not begun.
+function farFrom(run) {
+  const far = run.n_snapshots === 0 ? 2e12 : run.verdict === "gathering" ? 1e12 : 0;
+  return far + (run.snapshots_to_go?.estimate ?? 1e11);
 }

@@ -35,7 +35,7 @@ export class RunView {
       h("div", { class: "columns" }, this.#bound.root,
         h("div", { class: "aside" }, part("strange", "Strange now"), part("intake", "Intake"),
           part("record", "Record"))),
-      part("groups", "Groups of modes"), part("energies", "Energies"), this.modes.root, part("take", "Take away"));
+      h("div", { class: "columns even" }, part("groups", "Groups of modes"), part("energies", "Energies")), this.modes.root, part("take", "Take away"));
   }
 
   trail() { return [h("a", { href: "#/" }, "All runs")]; }

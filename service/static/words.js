@@ -53,6 +53,7 @@ export function stateOf(run) {
 // May I stop: the largest words of the page.
 export function answer(run) {
   if (run.status === "failed") return "Failed";
+  if (run.status === "open" && run.n_snapshots === 0) return "No data yet";
   if (run.status === "open") return run.advice === "may stop" ? "May stop" : "Continue";
   return run.verdict === "settled" ? "Settled" : "Not settled";
 }

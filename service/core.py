@@ -14,7 +14,7 @@ from service.durable import DirectoryLock, Poison
 from service.folders import Folders
 from service.journal import sweep
 from service.leases import Leases
-from service.reading import Reader
+from service.reading import ALL, Reader
 from service.records import RunRecord
 from service.registry import Registry
 from service.settings import Settings
@@ -73,7 +73,7 @@ class Service:
 
     def _recover(self) -> None:
         self.folders.empty_refuse()
-        runs = {run.id: run for run in self.reader.runs(limit=self.settings.max_runs + 1)}
+        runs = {run.id: run for run in self.reader.runs(limit=ALL)}
         for folder in self.folders.runs.iterdir():
             if folder.name not in runs:
                 self.folders.remove_run(folder.name)

@@ -18,15 +18,13 @@ import numpy.typing as npt
 
 from service.durable import Poison, sync_directory, sync_file
 from service.folders import RunFolder
-from service.npy import ArrayHeader, NpyError, header_length, parse_header
+from service.npy import MAX_HEADER_BYTES, ArrayHeader, NpyError, header_length, parse_header
 from service.problems import Problem
 from service.records import BatchRecord
 from service.shapes import Expected
 from streaming.declaration import RunDeclaration
 
 DRAFT_SUFFIX = ".part"
-# Pieces in which a batch is read back to check its digest: fits the cache, few system calls.
-READ_BYTES = 2**20
 
 
 class JournalError(RuntimeError):
@@ -137,7 +135,7 @@ class JournalBatch:
         self.path = folder.batch(record.sequence)
         try:
             with self.path.open("rb") as file:
-                start = file.read(READ_BYTES if record.n_bytes > READ_BYTES else record.n_bytes)
+                start = file.read(MAX_HEADER_BYTES)
             length = header_length(start)
             if length is None or self.path.stat().st_size != record.n_bytes:
                 raise JournalError(f"{self.path} has not the {record.n_bytes} bytes that were acknowledged")

@@ -22,6 +22,9 @@ from service.records import (
 from service.registry import find_batch, find_run
 
 
+ALL = -1  # as a limit in SQLite
+
+
 class Reader:
     """Queries over one read-only connection for each thread."""
 
@@ -100,6 +103,13 @@ class Reader:
     def last_report(self, run_id: str) -> str | None:
         row = self._db.execute(
             "SELECT report FROM evaluations WHERE run = ? ORDER BY n_snapshots DESC LIMIT 1", (run_id,)
+        ).fetchone()
+        return None if row is None else row[0]
+
+    def last_result_at(self, run_id: str) -> str | None:
+        """When the last evaluation was made, or the run ended; None before the first."""
+        row = self._db.execute(
+            "SELECT max(at) FROM events WHERE run = ? AND kind IN ('evaluation', 'closed', 'failed')", (run_id,)
         ).fetchone()
         return None if row is None else row[0]
 

@@ -100,8 +100,14 @@ class Registry:
     # -- runs ---------------------------------------------------------------------------------------------
 
     def add_run(self, run_id: str, declaration_text: str, max_runs: int) -> RunRecord:
-        """Enter a declared run. Raises the 429 problem when there are ``max_runs``."""
+        """Enter a declared run, or find the one that was entered before under the same id.
+
+        Raises the 422 problem when that one differs, and the 429 problem when there are ``max_runs``.
+        """
         with self.transaction() as db:
+            known = db.execute(f"SELECT {RUN_COLUMNS} FROM runs WHERE id = ?", (run_id,)).fetchone()
+            if known is not None:
+                return _same_declaration(run_from(known), declaration_text)
             count = one(db.execute("SELECT count(*) FROM runs"))
             if count >= max_runs:
                 raise Problem("too-many-runs", f"{count} runs are kept, max_runs is {max_runs}; delete some")
@@ -177,6 +183,15 @@ class Registry:
 def add_event(db: sqlite3.Connection, run_id: str, kind: str, data: Mapping[str, Any]) -> None:
     """Number an event inside the transaction of what it reports."""
     db.execute("INSERT INTO events (run, kind, at, data) VALUES (?, ?, ?, ?)", (run_id, kind, now(), json.dumps(data)))
+
+
+def _same_declaration(known: RunRecord, declaration_text: str) -> RunRecord:
+    if known.declaration_text != declaration_text:
+        raise Problem(
+            "key-reused",
+            f"this Idempotency-Key came before with another declaration, for run {known.id}; use a new key",
+        )
+    return known
 
 
 def find_run(db: sqlite3.Connection, run_id: str) -> RunRecord:

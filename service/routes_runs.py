@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import asyncio
+import hashlib
 import re
 import secrets
 from typing import Annotated
 
 import numpy as np
 from fastapi import APIRouter, Header, Query, Request, Response
+from pydantic import ValidationError
 
 from service.access import ServiceOf
 from service.answers import RunChange, RunList, RunResource, run_resource
@@ -21,6 +23,7 @@ from service.problems import Problem
 from service.records import RunRecord, one
 from service.registry import add_event, find_run
 from service.shapes import Expected, expect_positions, expect_weights
+from service.translation import from_validation
 from service.waits import preferred_wait_seconds, wait_until
 from streaming.declaration import RunDeclaration
 from streaming.errors import DeclarationError
@@ -33,20 +36,25 @@ PAGE_RUNS = 100
 CLOSE_WAIT_SECONDS = 10.0  # most closes end sooner, and the caller then has the final verdict at once
 
 
-@router.post("", status_code=201, responses=refusals(422, 429, 503, 507))
-def declare_run(declaration: RunDeclaration, response: Response, service: ServiceOf) -> RunResource:
+@router.post("", status_code=201, responses=refusals(400, 409, 413, 422, 429, 503, 507))
+def declare_run(
+    declaration: RunDeclaration,
+    response: Response,
+    service: ServiceOf,
+    idempotency_key: Annotated[
+        str | None,
+        Header(min_length=1, max_length=200, description="the same key with the same declaration is the same run"),
+    ] = None,
+) -> RunResource:
     """Declare a run. The answer is the whole run, and Location its address."""
     service.poison.check()
     _check_memory(declaration, service.settings.memory_bytes)
     _check_names(declaration)
-    run_id = _new_id(declaration.name)
-    service.folders.run(run_id).create(service.poison)
-    try:
-        run = service.registry.add_run(run_id, declaration.model_dump_json(), service.settings.max_runs)
-    except Problem:
-        service.folders.remove_run(run_id)
-        raise
+    run_id = _new_id(declaration.name, idempotency_key)
     response.headers["Location"] = f"/v1/runs/{run_id}"
+    # The folder comes second: after a crash in between, the next start makes it.
+    run = service.registry.add_run(run_id, declaration.model_dump_json(), service.settings.max_runs)
+    service.folders.run(run_id).create(service.poison)
     return resource(service, run)
 
 
@@ -79,12 +87,19 @@ def change_run(run_id: str, change: RunChange, service: ServiceOf) -> RunResourc
                 f"run {run_id} holds {stored} batches; the criterion can change only before the first, since a "
                 "verdict that is bent to the data means nothing; declare a new run",
             )
-        members = {**run.declaration.model_dump(), **change.model_dump(exclude_none=True)}
-        changed = RunDeclaration.model_validate(members)
-        _check_names(changed)
+        changed = _changed(run.declaration, change)
         db.execute("UPDATE runs SET declaration = ? WHERE id = ?", (changed.model_dump_json(), run_id))
         add_event(db, run_id, "changed", {})
     return resource(service, service.reader.run(run_id))
+
+
+def _changed(declaration: RunDeclaration, change: RunChange) -> RunDeclaration:
+    try:
+        changed = RunDeclaration.model_validate({**declaration.model_dump(), **change.model_dump(exclude_none=True)})
+    except ValidationError as error:
+        raise from_validation(error.errors()) from error
+    _check_names(changed)
+    return changed
 
 
 @router.delete("/{run_id}", status_code=204, responses=refusals(404, 503))
@@ -232,7 +247,8 @@ def _check_names(declaration: RunDeclaration) -> None:
             raise Problem("invalid-request", f"label {name!r} is {value}; it must be finite")
 
 
-def _new_id(name: str) -> str:
-    """Readable, unguessable enough not to collide, and safe in a path."""
+def _new_id(name: str, key: str | None) -> str:
+    """Readable, safe in a path, and never the same twice, unless the same idempotency key asks for it."""
     slug = re.sub(r"[^a-z0-9]+", "-", name.lower()).strip("-")[:40] or "run"
-    return f"{slug}-{secrets.token_hex(4)}"
+    tail = secrets.token_hex(4) if key is None else hashlib.sha256(key.encode()).hexdigest()[:16]
+    return f"{slug}-{tail}"

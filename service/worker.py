@@ -106,7 +106,7 @@ class Worker(threading.Thread):
         except Problem as problem:
             return self._storage_trouble(run_id, problem.detail) if problem.kind != "unknown-run" else False
         except OSError as error:
-            if error.errno not in (errno.ENOSPC, errno.EDQUOT):
+            if error.errno == errno.EIO:  # the disk itself fails; a full disk or too few handles mend themselves
                 self._place.poison.set(f"run {run_id}: {error}")
             return self._storage_trouble(run_id, str(error))
         except (StreamError, JournalError) as error:

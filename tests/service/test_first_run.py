@@ -165,6 +165,24 @@ def test_an_archived_checkpoint_opens_elsewhere(service: RunningService, tmp_pat
     assert SnapshotStream.load(folder).n_applied == N
 
 
+def test_declaring_again_under_the_same_key(service: RunningService) -> None:
+    """A client that lost the answer asks again, and gets the run that it has."""
+    key = {"Idempotency-Key": "9d2f"}
+    first, again = (service.client.post("/v1/runs", json=declaration(), headers=key) for _ in range(2))
+    assert first.json() == again.json()
+    other = service.client.post("/v1/runs", json=declaration(dtype="float64"), headers=key)
+    assert other.json()["type"] == "/problems/key-reused"
+
+
+def test_a_criterion_may_change_before_the_first_batch(service: RunningService) -> None:
+    run = service.declare()
+    changed = service.client.patch(f"/v1/runs/{run}", json={"criterion": {"n_modes": 3}})
+    assert changed.json()["declaration"]["criterion"]["n_modes"] == 3
+    refused = service.client.patch(f"/v1/runs/{run}", json={"criterion": {"n_modes": 6}})
+    assert refused.json()["type"] == "/problems/invalid-request"
+    assert service.client.get(f"/v1/runs/{run}").json() == changed.json()
+
+
 def test_labels_change_and_runs_are_removed(service: RunningService) -> None:
     run = service.declare()
     changed = service.client.patch(f"/v1/runs/{run}", json={"labels": {"incidence_deg": 4}})

@@ -33,12 +33,17 @@ _COUNTERS = (
     "n_waiting",
     "repeated_snapshots",
     "discarded_energy",
+    "bend",
     "total_energy",
     "first_time",
     "applied_time",
     "last_time",
     "closed",
 )
+
+# Between looks at its orthonormality the basis may be off by this many eps of its dtype, see `Update.bend`.
+STRAIGHT_BEND = 1e3
+STRAIGHT_BLOCKS = 16  # at the least, its own products are computed once in so many blocks
 
 
 class SnapshotStream:
@@ -86,7 +91,7 @@ class SnapshotStream:
         self._plan = LookPlan()
         self._current: tuple[int, Assessment] | None = None
         self.n_applied = self.n_waiting = self.repeated_snapshots = 0
-        self.discarded_energy = 0.0
+        self.discarded_energy = self.bend = 0.0
         self.total_energy = 0.0
         self.first_time: float | None = None
         self.applied_time: float | None = None
@@ -161,14 +166,18 @@ class SnapshotStream:
                 by_field = len(self.declaration.fields) if self.declaration.scaling == "unit-variance" else None
                 self._tall.set_datum(n, by_field)
             rank = self._tall.rank
-            gram, probed = self._tall.project(n)
+            straight = (
+                self.bend < STRAIGHT_BEND
+                and (self.n_applied // self.declaration.length_of_block) % STRAIGHT_BLOCKS != 0
+            )
+            gram, probed = self._tall.project(n, straight)
             step = self._update(gram, n)
             self._ledger.carry(step.carried)
             energies = np.diag(gram)[rank:]
             self._ledger.add(step.coordinates, probed, energies, times)
         self._record.append(times, step.coordinates, step.carried)
         self._probes_basis = np.concatenate([self._probes_basis, probed.T], axis=1) @ step.transform.T
-        self._values = step.singular_values
+        self._values, self.bend = step.singular_values, step.bend
         self.total_energy += float(energies.sum())
         self.discarded_energy += step.discarded_energy
         self.n_applied, self.n_waiting, self._times = self.n_applied + n, 0, []

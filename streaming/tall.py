@@ -29,7 +29,7 @@ Float = npt.NDArray[np.floating]
 Array = npt.NDArray[np.float64]
 Result = TypeVar("Result")
 
-PANEL_BYTES = 4 * 1024**2  # of one panel; measured best on machines with 1 MiB of second-level cache per core
+PANEL_BYTES = 2 * 1024**2  # of one panel; measured best on machines with 1 MiB of second-level cache per core
 MAX_THREADS = 32
 ORTHONORMAL_EPS = 50.0  # after an ill-conditioned update the basis is made orthonormal beyond this many eps
 
@@ -129,26 +129,31 @@ class TallRows:
 
     # -- products ---------------------------------------------------------------------------------------
 
-    def project(self, n_snapshots: int) -> tuple[Array, Array]:
+    def project(self, n_snapshots: int, straight: bool = False) -> tuple[Array, Array]:
         """Return the Gram matrix of [U; Y], (r + n, r + n), and the probes of the snapshots, (n, p).
 
-        Products in the dtype of the rows within a panel, sums over panels in float64. Also adds the
-        snapshots to the running sum, so call it once per block.
+        Products in the dtype of the rows within a panel, sums over panels in float64. With ``straight`` the basis
+        is taken to be orthonormal, which saves its own products. Also adds the snapshots to the running sum, so
+        call it once per block.
         """
         r = self.rank
         ones = np.ones(n_snapshots, self.dtype)
 
-        def products(k: int) -> tuple[Float, Float]:
+        def products(k: int) -> tuple[Float, Float | None]:
             basis, new = self._rows(k, r), self._panels[k, N_PROBES + r : N_PROBES + r + n_snapshots]
             self._sum[k] += ones @ new
-            return new @ self._panels[k, : N_PROBES + r + n_snapshots].T, basis @ basis.T
+            cross = new @ self._panels[k, : N_PROBES + r + n_snapshots].T
+            return cross, None if straight else basis @ basis.T
 
         gram = np.zeros((r + n_snapshots, r + n_snapshots))
+        if straight:
+            gram[:r, :r] = np.eye(r)
         seen = np.zeros((n_snapshots, N_PROBES))
         for cross, inner in self._each(products):
             seen += cross[:, :N_PROBES]
             gram[r:] += cross[:, N_PROBES:]
-            gram[:r, :r] += inner
+            if inner is not None:
+                gram[:r, :r] += inner
         gram[:r, r:] = gram[r:, :r].T
         gram[r:, r:] = (gram[r:, r:] + gram[r:, r:].T) / 2
         return gram, seen

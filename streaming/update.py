@@ -14,6 +14,7 @@ Brand (2006), Linear Algebra Appl. 415, 20-30; Sirovich (1987), Q. Appl. Math. 4
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -41,7 +42,7 @@ class Update:
     carried : (q, r) coordinates of the old basis vectors in the new basis, by column
     coordinates : (n, q) coordinates of the new snapshots in the new basis, c = Y U_new'
     discarded_energy : sum of the squares of the singular values dropped in this update
-    discarded_largest : largest of these squares
+    bend : orthonormality error of the new basis to be expected, in eps of the dtype of the rows
     """
 
     transform: Array
@@ -49,7 +50,7 @@ class Update:
     carried: Array
     coordinates: Array
     discarded_energy: float
-    discarded_largest: float
+    bend: float
 
 
 def update_from_gram(singular_values: Array, gram: Array, max_rank: int, dtype: str, condition: float) -> Update | None:
@@ -61,7 +62,8 @@ def update_from_gram(singular_values: Array, gram: Array, max_rank: int, dtype: 
     gram : (K, K) G
     max_rank : R
     dtype : name of the dtype of the rows
-    condition : largest |y|^2 over smallest kept energy that G can serve, see `GRAM_CONDITION`
+    condition : largest |y|^2 over smallest kept energy that G can serve, see `GRAM_CONDITION`; infinite for a Gram
+        matrix to be taken as it is, whose basis is then made orthonormal by the caller
 
     Notes
     -----
@@ -74,20 +76,22 @@ def update_from_gram(singular_values: Array, gram: Array, max_rank: int, dtype: 
     values, vectors = eigh(scale[:, None] * gram * scale)
     largest = float(np.max(np.diag(gram)[rank:], initial=0.0))
     smallest_kept = values[-min(max_rank, len(values))]
-    if np.sqrt(len(gram) - rank) * largest > condition * smallest_kept:
+    spread = float(np.sqrt(len(gram) - rank)) * largest
+    if spread > condition * smallest_kept:
         return None
     sigma = np.sqrt(np.maximum(values[::-1], 0.0))
-    return _assemble(vectors[:, ::-1], sigma, scale, rank, max_rank, dtype)
+    bend = spread / float(smallest_kept) if spread > 0 and math.isfinite(condition) else 0.0
+    return _assemble(vectors[:, ::-1], sigma, scale, rank, max_rank, dtype, bend)
 
 
 def update_from_factor(singular_values: Array, factor: Array, max_rank: int, dtype: str) -> Update:
     """Update from C, (K, K) with C C' = A A', found from the rows by QR; loses no digits by squaring."""
     scale = np.concatenate([singular_values, np.ones(len(factor) - len(singular_values))])
     left, sigma, _ = svd(scale[:, None] * factor)
-    return _assemble(left, sigma, scale, len(singular_values), max_rank, dtype)
+    return _assemble(left, sigma, scale, len(singular_values), max_rank, dtype, 0.0)
 
 
-def _assemble(left: Array, sigma: Array, scale: Array, rank: int, max_rank: int, dtype: str) -> Update:
+def _assemble(left: Array, sigma: Array, scale: Array, rank: int, max_rank: int, dtype: str, bend: float) -> Update:
     floor = DEFICIENT_EPS * float(np.finfo(dtype).eps) * float(sigma[0])
     kept = min(max_rank, int(np.count_nonzero(sigma > floor)))
     x, s = left[:, :kept], sigma[:kept]
@@ -98,5 +102,5 @@ def _assemble(left: Array, sigma: Array, scale: Array, rank: int, max_rank: int,
         carried=(x[:rank] * s / scale[:rank, None]).T,
         coordinates=x[rank:] * s,
         discarded_energy=float(dropped.sum()),
-        discarded_largest=float(dropped.max(initial=0.0)),
+        bend=bend,
     )

@@ -43,8 +43,8 @@ class Grouping:
         return tuple(stop for _, stop in self.groups)
 
 
-def gap_statistics(modal: ModalMoments) -> Array:
-    """F statistic of each gap between neighbouring scored modes, (K - 1,).
+def gap_statistics(modal: ModalMoments, width: int) -> Array:
+    """F statistic of each gap between neighbouring scored modes, (K - 1,), blocks joined ``width`` at a time.
 
     gap^2 / (2 s^2) with s^2 = (Var(C_ii - C_jj) + 4 Var(C_ij)) / 2; equal energies give F(2, 2 nu), since
     the gap of an equal pair is Rayleigh distributed, with nu the degrees of freedom of one variance.
@@ -56,8 +56,8 @@ def gap_statistics(modal: ModalMoments) -> Array:
     """
     k = np.arange(modal.n_scored - 1)
     scores = modal.scores
-    difference = score_variance(scores[:, k, k] - scores[:, k + 1, k + 1], modal.width)
-    cross = score_variance(scores[:, k, k + 1], modal.width)
+    difference = score_variance(scores[:, k, k] - scores[:, k + 1, k + 1], width)
+    cross = score_variance(scores[:, k, k + 1], width)
     spread = difference + 4.0 * cross
     gap = modal.eigenvalues[k] - modal.eigenvalues[k + 1]
     floor = np.finfo(np.float64).tiny
@@ -67,7 +67,7 @@ def gap_statistics(modal: ModalMoments) -> Array:
 
 def find_groups(modal: ModalMoments, n_modes: int, level: float = SEPARATION_LEVEL) -> Grouping:
     """Group the leading modes until the group that holds mode ``n_modes`` is closed, taken whole."""
-    statistics = gap_statistics(modal)
+    statistics = gap_statistics(modal, modal.width)
     critical = critical_value(modal.n_blocks, modal.width, level)
     groups: list[Group] = []
     start = 0

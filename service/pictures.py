@@ -26,6 +26,7 @@ Array = npt.NDArray[np.float64]
 DOTS_PER_INCH = 120
 MAX_WIDTH_INCHES, MAX_HEIGHT_INCHES = 9.0, 7.0  # 1080 by 840 pixels: a wall page's tile, some 100 kB of PNG
 MIN_HEIGHT_INCHES = 2.6
+MAX_RATIO = 12.0  # of width to height, or the reverse, that is drawn true to scale; beyond, a strip would show nothing
 MAX_CELLS_PER_AXIS = 1500  # more than the picture has pixels
 MAX_DOTS = 100_000  # drawing dots takes some microseconds each
 MAX_TITLE_LETTERS = 90  # what fits above the picture
@@ -112,8 +113,7 @@ def _on_axes(values: Values, axes: list[Array], ink: _Ink) -> Figure:
     if len(axes) == 1:
         return _line(values, axes[0], names[0], ink)
     planes = [(0, 1)] if len(axes) == 2 else [(1, 2), (0, 2), (0, 1)]
-    ratio = sum(_extent(axes[i]) / _extent(axes[j]) for i, j in planes)
-    figure, panels = _panels(len(planes), ratio)
+    figure, panels = _panels([_extent(axes[j]) / _extent(axes[i]) for i, j in planes])
     for panel, (i, j) in zip(panels, planes, strict=True):
         _image(panel, _middle_plane(values, i, j), axes[i], axes[j], ink)
         panel.set(xlabel=names[j], ylabel=names[i])
@@ -134,7 +134,7 @@ def _image(panel: Axes, plane: Values, rows: Array, columns: Array, ink: _Ink) -
     down, right = (-(-len(axis) // MAX_CELLS_PER_AXIS) for axis in (rows, columns))
     edges = _edges(columns[::right]), _edges(rows[::down])
     panel.pcolormesh(*edges, plane[::down, ::right], cmap=ink.colours, norm=ink.norm, rasterized=True)
-    if 1 / 12 < _extent(rows) / _extent(columns) < 12:
+    if 1 / MAX_RATIO < _extent(rows) / _extent(columns) < MAX_RATIO:
         panel.set_aspect("equal")
 
 
@@ -172,13 +172,13 @@ def _on_points(values: Values, places: Array, ink: _Ink) -> Figure:
         return _line(values[order], places[order, 0], "x", ink)
     planes = [(0, 1)] if n_axes == 2 else [(0, 1), (0, 2), (1, 2)]
     spans = np.maximum(np.ptp(places, axis=0), 1e-300)
-    figure, panels = _panels(len(planes), sum(float(spans[j] / spans[i]) for i, j in planes))
+    figure, panels = _panels([float(spans[i] / spans[j]) for i, j in planes])
     for panel, (i, j) in zip(panels, planes, strict=True):
         shown = _shown_points(places, ({0, 1, 2} - {i, j}).pop() if n_axes == 3 else None)
-        size = float(np.clip(6e4 / max(1, len(shown)), 0.3, 60.0))
+        size = float(np.clip(6e4 / len(planes) ** 2 / max(1, len(shown)), 0.3, 60.0))
         _dots(panel, places[shown, i], places[shown, j], values[shown], size, ink)
         panel.set(xlabel=AXES[i], ylabel=AXES[j])
-        if 1 / 12 < spans[j] / spans[i] < 12:
+        if 1 / MAX_RATIO < spans[j] / spans[i] < MAX_RATIO:
             panel.set_aspect("equal")
     _scale_bar(figure, panels, ink)
     return figure
@@ -211,7 +211,7 @@ def _shown_points(places: Array, across: int | None) -> npt.NDArray[np.intp]:
 def _line(values: Values, places: Array, name: str, ink: _Ink) -> Figure:
     """Values over one axis, with the zero line where it lies in view."""
     thin = -(-len(values) // MAX_DOTS)
-    figure, (panel,) = _panels(1, 0.35)
+    figure, (panel,) = _panels([3.0])
     panel.axhline(0.0, color="#888888", linewidth=0.8)
     marker = "o" if len(values) <= 60 else ""
     panel.plot(places[::thin], values[::thin], color="#1f4e8c", linewidth=1.4, marker=marker, markersize=3.5)
@@ -225,12 +225,12 @@ def _line(values: Values, places: Array, name: str, ink: _Ink) -> Figure:
 # -- the sheet -----------------------------------------------------------------------------------------------
 
 
-def _panels(n: int, height_over_width: float) -> tuple[Figure, list[Axes]]:
-    """A figure with n panels on top of each other, as high as they need together."""
-    width = MAX_WIDTH_INCHES
-    height = float(np.clip(0.78 * width * height_over_width + 0.5 + 0.5 * n, MIN_HEIGHT_INCHES, MAX_HEIGHT_INCHES))
-    figure = Figure(figsize=(width, height), layout="compressed", facecolor="white")
-    panels = [figure.add_subplot(n, 1, k + 1) for k in range(n)]
+def _panels(width_over_height: list[float]) -> tuple[Figure, list[Axes]]:
+    """A figure with panels of these shapes side by side, as high as the widest sheet makes them."""
+    shares = [float(np.clip(ratio, 1 / MAX_RATIO, MAX_RATIO)) for ratio in width_over_height]
+    height = float(np.clip(0.8 * MAX_WIDTH_INCHES / sum(shares) + 0.9, MIN_HEIGHT_INCHES, MAX_HEIGHT_INCHES))
+    figure = Figure(figsize=(MAX_WIDTH_INCHES, height), layout="compressed", facecolor="white")
+    panels = list(figure.subplots(1, len(shares), width_ratios=shares, squeeze=False)[0])
     for panel in panels:
         panel.tick_params(labelsize=9)
     return figure, panels

@@ -10,7 +10,15 @@ from typing import Any
 from fastapi import FastAPI
 from pydantic.json_schema import models_json_schema
 
-from service import routes_batches, routes_events, routes_page, routes_plain, routes_results, routes_runs
+from service import (
+    routes_batches,
+    routes_campaigns,
+    routes_events,
+    routes_page,
+    routes_plain,
+    routes_results,
+    routes_runs,
+)
 from service.answers import ProblemDocument
 from service.core import Service
 from service.headers import SecurityHeaders
@@ -44,7 +52,15 @@ def create_app(service: Service) -> FastAPI:
         redoc_url=None,
     )
     app.state.service = service
-    for routes in (routes_runs, routes_batches, routes_results, routes_events, routes_page, routes_plain):
+    for routes in (
+        routes_runs,
+        routes_batches,
+        routes_results,
+        routes_campaigns,
+        routes_events,
+        routes_page,
+        routes_plain,
+    ):
         app.include_router(routes.router)
     install(app)
     app.add_middleware(Guard, settings=service.settings)

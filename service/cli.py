@@ -24,7 +24,7 @@ app = typer.Typer(
 )
 
 # Commands of other parts: each module has register(app). Imported only here, so that what they need is their own.
-_PARTS = ("service.commands_wait", "service.demo.command", "streaming.calibration.command")
+_PARTS = ("service.commands_wait", "service.commands_campaign", "service.demo.command", "streaming.calibration.command")
 
 
 def _show_version(wanted: bool) -> None:

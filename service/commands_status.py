@@ -54,7 +54,7 @@ def _show_one(run: Run, as_json: bool) -> None:
     if as_json:
         print(json.dumps({"run": run.resource, "convergence": report}, indent=2))
         return
-    _console().print(_detail(run, report))
+    output_console().print(_detail(run, report))
 
 
 def _show_all(client: Client, as_json: bool) -> None:
@@ -64,13 +64,13 @@ def _show_all(client: Client, as_json: bool) -> None:
         listed: list[dict[str, Any]] = [{"run": run.resource, "verdict": it["verdict"]} for run, it in rows]
         print(json.dumps({"runs": listed, "left_out": len(runs) - len(rows)}, indent=2))
         return
-    console = _console()
+    console = output_console()
     console.print(_overview(rows) if rows else f"no runs at {client.url}")
     if len(runs) > len(rows):
         console.print(f"{len(runs) - len(rows)} more runs are not shown")
 
 
-def _console() -> Console:
+def output_console() -> Console:
     """Standard output; in a file or a pipe, wide enough that nothing is cut."""
     console = Console()
     return console if console.is_terminal else Console(width=max(console.width, PLAIN_WIDTH))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from types import TracebackType
 from typing import Any
 from urllib.parse import quote
@@ -66,6 +66,20 @@ class Client:
             found += [Run(self._transport, resource) for resource in answer["runs"]]
             page = answer.get("next")
         return found
+
+    def campaigns(self) -> list[dict[str, Any]]:
+        """Campaigns of the service, by name, with the verdicts of their points counted."""
+        return list(self._transport.json("GET", "/v1/campaigns")["campaigns"])
+
+    def campaign(self, name: str, between: Sequence[str] = ()) -> dict[str, Any]:
+        """The test points of a campaign side by side; with ``between``, angles between those runs (by id).
+
+        Raises
+        ------
+        NotFoundError : no run belongs to such a campaign, or a run to compare has no result yet
+        """
+        params = {"between": ",".join(between)} if between else None
+        return dict(self._transport.json("GET", f"/v1/campaigns/{quote(name, safe='')}", params=params))
 
     def close(self) -> None:
         """Give the connections back; runs and hooks made from this client end with it."""

@@ -13,13 +13,14 @@ export function boundTable(reports, criterion) {
   const last = ordered[ordered.length - 1];
   const names = last ? last.groups.slice(0, MAX_GROUPS).map((group) => groupName(group.modes)) : [];
   const forecast = last ? forecastOf(last, criterion.max_angle_deg) : null;
-  const x = ordered.map((one) => one.n_snapshots);
+  const places = ordered.map((one) => one.n_snapshots);
+  const x = [...places];
   const lines = names.map((name) => ordered.map((one) => boundOf(one, name)));
   if (forecast) {
     x.push(forecast.high);
     for (const line of lines) line.push(null);
   }
-  return { x, names, lines, tolerance: x.map(() => criterion.max_angle_deg), forecast, last };
+  return { x, places, names, lines, tolerance: x.map(() => criterion.max_angle_deg), forecast, last };
 }
 
 function boundOf(report, name) {

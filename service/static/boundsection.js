@@ -22,6 +22,7 @@ export class BoundSection {
     [this.#key, this.#found] = [key, found];
     const words = boundWords(found, run);
     say(this.#words, words);
+    this.#chart.frame.dataset.places = found.places.join(" "); // snapshot numbers with a point
     const series = JSON.stringify([found.names, run.declaration.criterion.max_angle_deg]);
     this.#chart.show(series, () => boundOptions(this.#found, () => this.#found.forecast),
       [found.x, ...found.lines, found.tolerance], words);

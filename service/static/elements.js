@@ -33,6 +33,11 @@ export function table(caption, headings, rows, kind = "") {
       (k === 0 ? h("th", { scope: "row" }, cell) : h("td", {}, cell)))))));
 }
 
+// What may be wider than a phone scrolls by itself, with the keyboard too.
+export function wide(name, element) {
+  return h("div", { class: "wide", role: "region", "aria-label": name, tabindex: "0" }, element);
+}
+
 // The level of the water: flat when slack, waves while it moves; the shape says what the colour says.
 const GAUGES = {
   settled: ["M2 12h20"],

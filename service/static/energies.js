@@ -1,6 +1,6 @@
 // Energies with their intervals as a table, each with a mark on a common logarithmic axis; text first, picture beside.
 
-import { h, svg, table } from "./elements.js";
+import { h, svg, table, wide } from "./elements.js";
 import { digits, percent } from "./words.js";
 
 const [WIDTH, HEIGHT, PAD] = [200, 20, 6];
@@ -18,7 +18,8 @@ export function energyTable(report, n) {
   const rows = modes.map((one) => [String(one.mode), percent(one.energy_fraction),
     `${percent(one.energy_fraction_low)} to ${percent(one.energy_fraction_high)}`, mark(one, edge, place),
     ...(frequency ? [digits(one.peak_frequency)] : []), ...(strouhal ? [digits(one.strouhal)] : [])]);
-  return h("div", {}, table("Energies of the modes, with intervals", headings, rows, "numbers"),
+  const caption = "Energies of the modes, with intervals";
+  return h("div", {}, wide(caption, table(caption, headings, rows, "numbers")),
     h("p", { class: "note" }, notes(report, edge)));
 }
 

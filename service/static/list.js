@@ -1,6 +1,6 @@
 // All runs with their verdicts, newest first, and the campaigns they belong to.
 
-import { gauge, h, say } from "./elements.js";
+import { gauge, h, say, wide } from "./elements.js";
 import { answer, clock, count, rough, stateOf } from "./words.js";
 
 // Every run there is, page by page; the service keeps at most some thousand.
@@ -42,9 +42,8 @@ export class ListView {
     this.root = h("div", { class: "list" }, h("h1", {}, "Have the leading modes settled?"),
       h("section", { "aria-label": "Campaigns" }, this.#campaigns),
       h("p", { class: "find" }, h("label", { for: "find" }, "Find a run"), this.#find),
-      h("div", { class: "wide", role: "region", "aria-label": "Runs", tabindex: "0" },
-        h("table", { class: "runs" }, h("caption", { class: "unseen" }, "Runs, newest first"),
-          h("thead", {}, head), this.#body)), this.#empty);
+      wide("Runs", h("table", { class: "runs" }, h("caption", { class: "unseen" }, "Runs, newest first"),
+        h("thead", {}, head), this.#body)), this.#empty);
   }
 
   trail() { return []; }

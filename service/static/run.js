@@ -2,7 +2,7 @@
 
 import { BoundSection } from "./boundsection.js";
 import { energyTable } from "./energies.js";
-import { h, say, table } from "./elements.js";
+import { h, say, table, wide } from "./elements.js";
 import { intakeList, Rate, recordList, strange, strangeList } from "./health.js";
 import { ModesSection } from "./modes.js";
 import { VerdictPanel } from "./verdict.js";
@@ -138,8 +138,7 @@ function groupTable(report, criterion) {
     degrees(group.angle_bound_deg), degrees(group.angle_deg), degrees(group.truncation_angle_deg),
     group.energy_halfwidth === null ? "–" : `± ${percent(group.energy_halfwidth)}`]);
   const caption = `Groups of modes, tolerance ${degrees(criterion.max_angle_deg)}`;
-  return h("div", { class: "wide", role: "region", "aria-label": caption, tabindex: "0" },
-    table(caption, ["Modes", "Settled", "Bound", "Expected", "Truncation", "Energy"], rows, "numbers"));
+  return wide(caption, table(caption, ["Modes", "Settled", "Bound", "Expected", "Truncation", "Energy"], rows, "numbers"));
 }
 
 function downloads(path, checkpoints) {

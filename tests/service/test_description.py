@@ -56,7 +56,8 @@ def test_the_pages_need_no_network(service: RunningService) -> None:
         assert page.status_code == 200
         assert "http://" not in page.text
         assert "https://" not in page.text
-        assert "<script" not in page.text
+        assert "<script>" not in page.text
+        assert "<style" not in page.text
     docs = service.client.get("/docs").text
     for path in service.client.get("/openapi.json").json()["paths"]:
         assert path in docs

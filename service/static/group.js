@@ -29,7 +29,7 @@ export class GroupFigure {
   }
 
   #picture(mode) {
-    const drawn = this.plan ? h("canvas", { role: "img" }) : h("img", { alt: "", decoding: "async" });
+    const drawn = this.plan ? h("canvas", { role: "img", "aria-label": `Mode ${mode}, not read yet` }) : h("img", { alt: "", decoding: "async" });
     const bar = h("div");
     return { mode, drawn, bar, root: h("div", { class: "picture" }, h("p", {}, `Mode ${mode}`), drawn, bar,
       this.plan ? h("p", { class: "note" }, placeWords(this.plan)) : null) };

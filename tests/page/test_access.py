@@ -140,7 +140,8 @@ def _focused(page: Any) -> str:
         """() => { const one = document.activeElement;
             const label = one.labels?.length ? one.labels[0].innerText.trim() : "";
             const set = one.closest("fieldset")?.querySelector("legend")?.innerText;
-            const name = [set, label].filter(Boolean).join(" ") || one.getAttribute("aria-label") || one.innerText || one.tagName;
+            const named = [set, label].filter(Boolean).join(" ") || one.getAttribute("aria-label");
+            const name = named || one.innerText || one.tagName;
             return [name, one === document.body ? "solid" : getComputedStyle(one).outlineStyle]; }"""
     )
     assert ring == "solid", name

@@ -38,13 +38,17 @@ def array_response(values: npt.NDArray[Any], accept: str | None, n_snapshots: in
     return Response(npy_bytes(values), media_type=NPY, headers=headers)
 
 
+def check_json_size(n_values: int) -> None:
+    """Raise the 406 problem when so many values are too many for text; asked before they are read."""
+    if n_values > MAX_JSON_VALUES:
+        raise Problem(
+            "not-acceptable", f"{n_values} values are too many for JSON (at most {MAX_JSON_VALUES}); ask for {NPY}"
+        )
+
+
 def json_text(values: npt.NDArray[Any]) -> str:
     """``{"shape", "values"}``. Raises the 406 problem when it is too large."""
-    if values.size > MAX_JSON_VALUES:
-        raise Problem(
-            "not-acceptable",
-            f"{values.size} values are too many for JSON (at most {MAX_JSON_VALUES}); ask for {NPY}",
-        )
+    check_json_size(values.size)
     finite = np.isfinite(values)
     plain = values.astype(object)
     plain[~finite] = None

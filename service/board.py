@@ -65,7 +65,7 @@ class Bell:
     """Wakes everyone on the event loop who waits for something to change; rung from any thread."""
 
     def __init__(self) -> None:
-        self._lock = threading.Lock()
+        self._lock = threading.RLock()  # a signal handler may ring while the main thread is ringing
         self._loop: asyncio.AbstractEventLoop | None = None
         self._rung = asyncio.Event()
         self._scheduled = False

@@ -24,7 +24,7 @@ from streaming.report import Convergence
 logger = logging.getLogger("slackwater")
 
 # The block in hand may take longer than this; it is then cut off by the end of the process and replayed.
-STOP_SECONDS = 3.0
+STOP_SECONDS = 2.0
 
 
 class Service:
@@ -38,7 +38,7 @@ class Service:
         self.board = Board(self.bell)
         self.leases = Leases()
         self.counters: Counter[str] = Counter()
-        self.n_streams = self.n_waits = self.n_bodies = 0
+        self.n_streams = self.n_waits = self.n_bodies = self.incoming_bytes = 0
         self._lock = DirectoryLock(settings.data_directory)
         try:
             self.folders.create()

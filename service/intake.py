@@ -75,7 +75,7 @@ def parse_digest(text: str | None) -> bytes | None:
 def check_capacity(service: Service, run: RunRecord, sequence: int | None, n_bytes: int) -> None:
     """Raise the 429, 503 and 507 problems when the body cannot be kept now."""
     service.poison.check()
-    check_free_space(service.folders.root, n_bytes, service.settings.min_free_bytes)
+    check_free_space(service.folders.root, n_bytes + service.incoming_bytes, service.settings.min_free_bytes)
     backlog = service.reader.backlog(run.id)
     closes_gap = backlog.n_waiting > 0 and sequence == run.next_sequence
     if backlog.n_bytes + n_bytes > journal_limit_bytes(service, run) and not closes_gap:
@@ -106,6 +106,7 @@ async def received(
         )
     wanted = parse_digest(request.headers.get("content-digest"))
     service.n_bodies += 1
+    service.incoming_bytes += n_bytes
     draft = None
     try:
         draft = Draft(service.folders.run(run.id).journal, n_bytes, expected, service.poison)
@@ -121,6 +122,7 @@ async def received(
         raise storage_problem(error) from error
     finally:
         service.n_bodies -= 1
+        service.incoming_bytes -= n_bytes
         if draft is not None:
             draft.discard()
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import threading
 import uuid
 from pathlib import Path
 from typing import Any
@@ -32,12 +33,17 @@ class JournalError(RuntimeError):
 
 
 class Draft:
-    """A body being written; belongs to one request, and is used by one thread at a time."""
+    """A body being written; belongs to one request.
+
+    Its thread may still be writing when the request is given up, so closing waits for it: a descriptor must not be
+    written to after its number has gone to another file.
+    """
 
     def __init__(self, folder: Path, n_bytes: int, expected: Expected, poison: Poison) -> None:
         self.path = folder / f"{uuid.uuid4().hex}{DRAFT_SUFFIX}"
         self._n_bytes, self._expected, self._poison = n_bytes, expected, poison
         self._file = self.path.open("xb", buffering=0)
+        self._lock = threading.Lock()
         self._hash = hashlib.sha256()
         self._rest = b""  # bytes of the header so far, then of a value cut by the end of a piece
         self._n_values = 0
@@ -55,7 +61,8 @@ class Draft:
             self._take_header()
         if self.header is not None:
             self._check_values(self.header)
-        _write_all(self._file.fileno(), piece)
+        with self._lock:
+            _write_all(self._file.fileno(), piece)
 
     def _take_header(self) -> None:
         try:
@@ -96,8 +103,9 @@ class Draft:
 
     def sync(self) -> None:
         """Bring the bytes to the disk. Raises the 503 problem."""
-        sync_file(self._file.fileno(), self._poison, self.path.name)
-        self._file.close()
+        with self._lock:
+            sync_file(self._file.fileno(), self._poison, self.path.name)
+            self._file.close()
 
     def keep(self, path: Path) -> None:
         """Rename to the final name, durably. Raises OSError or the 503 problem."""
@@ -106,7 +114,8 @@ class Draft:
 
     def discard(self) -> None:
         """Leave nothing behind; harmless after `keep`."""
-        self._file.close()
+        with self._lock:
+            self._file.close()
         self.path.unlink(missing_ok=True)
 
 

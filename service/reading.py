@@ -21,7 +21,6 @@ from service.records import (
 )
 from service.registry import find_batch, find_run
 
-
 ALL = -1  # as a limit in SQLite
 
 

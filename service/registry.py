@@ -79,11 +79,11 @@ class Registry:
                 finally:
                     if self._connection.in_transaction:
                         self._connection.execute("ROLLBACK")
-            except sqlite3.OperationalError as error:
+            except sqlite3.DatabaseError as error:
                 raise self._storage_problem(error) from error
         self._changed()
 
-    def _storage_problem(self, error: sqlite3.OperationalError) -> Problem:
+    def _storage_problem(self, error: sqlite3.DatabaseError) -> Problem:
         if error.sqlite_errorcode & 0xFF == sqlite3.SQLITE_FULL:
             return Problem(
                 "disk-full",

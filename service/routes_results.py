@@ -12,7 +12,7 @@ from starlette.responses import StreamingResponse
 from service.access import ServiceOf
 from service.answers import CheckpointList, CheckpointResource, first_report
 from service.archive import zipped
-from service.arrays import SNAPSHOTS_HEADER, array_response, json_text, streamed_response, wants
+from service.arrays import SNAPSHOTS_HEADER, array_response, check_json_size, json_text, streamed_response, wants
 from service.bodies import NPY, array_answer, refusals
 from service.drawing import mean_picture, mode_picture
 from service.problems import Problem
@@ -85,6 +85,7 @@ def read_modes(run_id: str, service: ServiceOf, n: Count = None, accept: Accept 
         count = source.check_count("n", n or source.n_modes)
         shape = (count, len(source.declaration.fields), source.declaration.n_points)
         if wants(accept, NPY, "application/octet-stream", "application/json") == "application/json":
+            check_json_size(count * source.declaration.n_rows)
             values = np.concatenate(list(source.pieces(range(count)))).reshape(shape)
             response = array_response(values, "application/json", source.n_snapshots)
             done()

@@ -14,7 +14,7 @@ from service.settings import Settings
 # A batch may name the time of each of its snapshots in the query, about 25 characters each.
 MAX_HEAD_BYTES = 2**20
 # After this, connections that still send or receive are cut; their bodies were not acknowledged.
-GRACE_SECONDS = 3
+GRACE_SECONDS = 2
 
 
 class SlackwaterServer(uvicorn.Server):

@@ -194,3 +194,38 @@ def test_sigterm_with_open_streams_ends_soon(tmp_path: Path) -> None:
             thread.join(5)
         assert ended.is_set()
         assert "Traceback" not in service.log
+
+
+def test_sigterm_under_load_loses_nothing(tmp_path: Path) -> None:
+    data = tmp_path / "data"
+    with RunningService(data) as service:
+        run = service.declare()
+        stopper = threading.Timer(0.5, service.process.terminate)
+        stopper.start()
+        acknowledged = post_until_cut(service, run, 0)
+        assert service.end(signal.SIGTERM) < 5.0
+        stopper.join()
+        assert "Traceback" not in service.log
+    with RunningService(data) as service:
+        following = service.client.get(f"/v1/runs/{run}").json()["next_sequence"]
+        assert acknowledged <= following <= acknowledged + 1
+        post(service, run, range(following, following + 2))
+        check_same(service, run, (following + 2) * BATCH)
+
+
+def test_runs_that_rest_give_way_and_come_back(tmp_path: Path) -> None:
+    """Memory for one run only: two runs in turn reach the bits of runs that had it to themselves."""
+    points = 3000  # two fields, 34 rows of working memory, 4 bytes: 0.8 MB of the 1 MiB there is
+    wide = {"n_points": points, "grid": {"kind": "none"}}
+    rows = np.random.default_rng(3).standard_normal((2, 60, 2, points)).astype(np.float32)
+    with RunningService(tmp_path / "data", environment={"SLACKWATER_MEMORY_BYTES": str(2**20)}) as service:
+        runs = [service.declare(**wide) for _ in range(2)]
+        for sequence in range(4):
+            for run, batch in zip(runs, rows[:, sequence * 15 : (sequence + 1) * 15], strict=True):
+                assert service.put(run, sequence, batch, headers={"Prefer": "wait=10"}).status_code == 201
+        for run, own in zip(runs, rows, strict=True):
+            assert service.client.post(f"/v1/runs/{run}/close").json()["status"] == "closed"
+            direct = SnapshotStream(declaration(**wide))
+            direct.absorb(own)
+            direct.close()
+            np.testing.assert_array_equal(service.array(f"/v1/runs/{run}/modes?n=3"), direct.modes(3))

@@ -57,8 +57,11 @@ class CoefficientRecord:
         self._file.flush()
         os.fsync(self._file.fileno())
 
-    def read(self) -> tuple[Array, Array]:
-        """Return times (N,) and coefficients (N, q) of the whole record in the current basis."""
+    def read(self, at_least: int | None = None) -> tuple[Array, Array]:
+        """Return times (N,) and coefficients (N, R) in the current basis, padded with zeros beyond its rank.
+
+        With ``at_least`` the oldest blocks beyond so many snapshots are left out.
+        """
         turn = np.eye(self._max_rank)
         times: list[Array] = []
         parts: list[Array] = []
@@ -68,6 +71,8 @@ class CoefficientRecord:
             times.append(entry["times"][:n])
             parts.append(entry["coordinates"][:n] @ turn.T)
             turn = turn @ entry["carried"]
+            if at_least is not None and sum(map(len, times)) >= at_least:
+                break
         if not times:
             return np.zeros(0), np.zeros((0, 0))
         return np.concatenate(times[::-1]), np.concatenate(parts[::-1])

@@ -21,7 +21,8 @@ from streaming.looks import LookPlan
 from streaming.moments import Moments
 from streaming.probes import N_PROBES
 from streaming.record import CoefficientRecord
-from streaming.report import Convergence
+from streaming.report import Convergence, State
+from streaming.spectra import peak_frequencies
 from streaming.tall import TallRows, one_blas_thread
 from streaming.update import GRAM_CONDITION, Update, update_from_factor, update_from_gram
 
@@ -43,6 +44,7 @@ _COUNTERS = (
 
 # Between looks at its orthonormality the basis may be off by this many eps of its dtype, see `Update.bend`.
 STRAIGHT_BEND = 1e3
+MAX_SPECTRUM_SNAPSHOTS = 2**17  # the newest ones; bounds the memory and the time of a look
 STRAIGHT_BLOCKS = 16  # at the least, its own products are computed once in so many blocks
 
 
@@ -90,6 +92,7 @@ class SnapshotStream:
         self._previous: Float | None = None
         self._plan = LookPlan()
         self._current: tuple[int, Assessment] | None = None
+        self._peaks: tuple[float | None, ...] = ()
         self.n_applied = self.n_waiting = self.repeated_snapshots = 0
         self.discarded_energy = self.bend = 0.0
         self.total_energy = 0.0
@@ -141,11 +144,14 @@ class SnapshotStream:
         return blocks
 
     def close(self) -> None:
-        """Apply the snapshots that wait for a full block, and take no more."""
+        """Apply the snapshots that wait for a full block, and take no more.
+
+        A last look is taken unless the modes had settled: that verdict stands until the next look would be due.
+        """
         if self.n_waiting:
             self._apply_block()
-        looked = self._plan.looks[-1].n_snapshots if self._plan.looks else 0
-        if self.n_applied > looked:
+        last = self._plan.looks[-1] if self._plan.looks else None
+        if self.n_applied and (last is None or (last.n_snapshots < self.n_applied and last.state != State.SETTLED)):
             self._look()
         self.closed = True
 
@@ -204,7 +210,17 @@ class SnapshotStream:
     def _look(self) -> None:
         """Evaluate the criterion; only here the verdict may change."""
         assessment = self._assess(at_look=True)
+        self._peaks = self._find_peaks(assessment)
         self._plan.take(self.n_applied, assessment.look, report(assessment, self._context(at_look=True)))
+
+    def _find_peaks(self, assessment: Assessment) -> tuple[float | None, ...]:
+        """Peak frequencies of the wanted modes, from the newest coefficients behind the statistics."""
+        n_modes = max((stop for _, stop in assessment.evidence.groups), default=0)
+        n_last = min(self.n_applied - assessment.startup_snapshots, MAX_SPECTRUM_SNAPSHOTS)
+        times, coordinates = self._record.read(n_last)
+        turn = assessment.mode_rotation[:, :n_modes]
+        series = (coordinates[-n_last:, : len(turn)] - assessment.coordinate_mean) @ turn
+        return peak_frequencies(times[-n_last:], series)
 
     def _assess(self, at_look: bool = False) -> Assessment:
         if self._current is None or self._current[0] != self.n_applied:
@@ -226,6 +242,7 @@ class SnapshotStream:
             previous=self._plan.looks,
             at_look=at_look,
             reference=self.declaration.reference,
+            peak_frequencies=self._peaks,
         )
 
     def moments(self) -> Moments:
@@ -337,6 +354,7 @@ class SnapshotStream:
         self._previous = arrays.get("previous")
         self._record.fill(arrays["record_times"], arrays["record"])
         self._plan.restore(attributes["looks"])
+        self._peaks = tuple(mode.peak_frequency for report in self.history[-1:] for mode in report.modes)
 
 
 def _parse_declaration(declaration: RunDeclaration | Mapping[str, Any]) -> RunDeclaration:

@@ -252,3 +252,19 @@ class TestCheckpoints:
                     SnapshotStream.load(tmp_path / "c")
             file.write_bytes(good)
         SnapshotStream.load(tmp_path / "c")
+
+
+class TestSpectra:
+    def test_peaks_of_travelling_pairs_and_their_strouhal_number(self, make_stream: MakeStream) -> None:
+        stream = make_stream(
+            60,
+            retained_rank=12,
+            time={"unit": "s", "step": 0.02},
+            reference={"length": 0.1, "speed": 2.0},
+            criterion={"n_modes": 4, "max_angle_deg": 20.0},
+        )
+        stream.absorb(field(3000))
+        stream.close()
+        for mode, wave in zip(stream.convergence().modes, (1, 1, 2, 2), strict=True):
+            assert mode.peak_frequency == pytest.approx(0.013 * wave / 0.02, rel=0.02)
+            assert mode.strouhal == pytest.approx(mode.peak_frequency * 0.05)

@@ -15,6 +15,7 @@ Array = npt.NDArray[np.float64]
 
 MIN_BLOCKS = 8  # fewer values per half give the tests nothing to go by
 STARTUP_LEVEL = 0.001  # chance that a stationary record loses its first blocks at a look; they are lost for little
+ROUND_OFF = 1e-9  # of the largest value of a series; smaller differences are arithmetic, not flow
 DRIFT_LEVEL = 0.005  # a false alarm only delays the verdict until a later look
 
 
@@ -37,7 +38,8 @@ class Drift:
 def mser(series: Array) -> int:
     """Number of leading values to leave out by the marginal standard error rule.
 
-    argmin over d of (n - d)^-2 sum_{i > d} (x_i - mean_{> d})^2.
+    argmin over d <= 3 n / 4 of (n - d)^-2 sum_{i > d} (x_i - mean_{> d})^2; beyond, a few last values that lie
+    close together by chance would win.
 
     References
     ----------
@@ -49,7 +51,7 @@ def mser(series: Array) -> int:
     tail_square = np.cumsum(((series - series.mean()) ** 2)[::-1])[::-1]
     offset = tail_sum / left - series.mean()
     statistic = (tail_square - left * offset**2) / left**2
-    return int(np.argmin(statistic[: n - 1])) if n > 1 else 0
+    return int(np.argmin(statistic[: 3 * n // 4 + 1])) if n > 1 else 0
 
 
 def find_startup(moments: Moments, n_modes: int) -> Startup:
@@ -77,8 +79,7 @@ def _startup_series(moments: Moments, n_modes: int) -> Array:
     n = min(n_modes, moments.rank)
     variances = np.einsum("bii->bi", moments.scatters[:, :n, :n]) / moments.counts[:, None]
     positive = np.concatenate([moments.block_energies()[:, None], variances], axis=1)
-    floor = np.maximum(1e-12 * positive.max(axis=0, initial=0.0), np.finfo(np.float64).tiny)
-    return np.concatenate([np.log(np.maximum(positive, floor)), moments.means[:, :n]], axis=1)
+    return np.concatenate([_logarithm(positive), moments.means[:, :n]], axis=1)
 
 
 def p_value_of_start(values: Array, cut: int) -> float:
@@ -89,8 +90,8 @@ def p_value_of_start(values: Array, cut: int) -> float:
     reference = values[len(values) // 2 :]
     spread = float(reference.std(ddof=1))
     deviation = abs(float(values[:cut].mean() - reference.mean()))
-    if spread <= 1e-12 * abs(float(reference.mean())):
-        return 0.0 if deviation > spread else 1.0
+    if spread <= ROUND_OFF * float(np.abs(values).max()):
+        return 0.0 if deviation > ROUND_OFF * float(np.abs(values).max()) else 1.0
     memory = _memory(reference)
     error = spread * np.sqrt(memory * (1.0 / cut + 1.0 / len(reference)))
     return float(2.0 * student.sf(deviation / error, max(len(reference) / memory - 1.0, 1.0)))
@@ -110,20 +111,32 @@ def _memory(values: Array) -> float:
 
 
 def find_drift(modal: ModalMoments, n_modes: int) -> Drift:
-    """Compare the halves of the record: energy, leading means, variances and covariances."""
+    """Compare the halves of the record in energy, leading means and leading (co)variances; p is corrected for all."""
     if modal.n_blocks < 2 * MIN_BLOCKS:
         return Drift(None, False)
-    n = min(n_modes, modal.n_scored)
-    rows, columns = np.triu_indices(n)
-    moments = modal.scores[:, rows, columns] / modal.shares[:, None]
-    energies = modal.block_energies[:, None]
-    series = np.concatenate([energies, modal.means[:, :n], moments], axis=1)
+    series = _drift_series(modal, min(n_modes, modal.n_scored))
     if 2 * modal.shares[-1] < modal.shares[0]:  # a short last block would weigh as much as the others
         series = series[:-1]
     half = len(series) // 2
     p_values = half_against_half(series[:half], series[len(series) - half :])
     p_value = min(1.0, float(p_values.min()) * len(p_values))
     return Drift(p_value, p_value < DRIFT_LEVEL)
+
+
+def _drift_series(modal: ModalMoments, n: int) -> Array:
+    """Block values (B, k) of what should be the same in both halves; energies by their logarithm for their skew."""
+    second = modal.scores[:, :n, :n] / modal.shares[:, None, None]
+    variances = np.einsum("bii->bi", second) + modal.eigenvalues[:n]
+    rows, columns = np.triu_indices(n, 1)
+    positive = np.concatenate([modal.block_energies[:, None], variances], axis=1)
+    return np.concatenate([_logarithm(positive), modal.means[:, :n], second[:, rows, columns]], axis=1)
+
+
+def _logarithm(positive: Array) -> Array:
+    """Logarithm of block energies (B, n), with a floor for blocks of nothing."""
+    floor = np.maximum(1e-12 * positive.max(axis=0, initial=0.0), np.finfo(np.float64).tiny)
+    logarithm: Array = np.log(np.maximum(positive, floor))
+    return logarithm
 
 
 def half_against_half(first: Array, second: Array) -> Array:
@@ -133,7 +146,7 @@ def half_against_half(first: Array, second: Array) -> Array:
     spread = np.sqrt(errors[0] + errors[1])
     difference = np.abs(joined[0].mean(axis=0) - joined[1].mean(axis=0))
     freedom = max(len(joined[0]) - 1, 1)
-    safe = np.where(spread > 0, spread, 1.0)
-    statistic = np.where(spread > 0, difference / safe, np.where(difference > 0, np.inf, 0.0))
-    p_values: Array = 2 * student.sf(statistic, freedom)
+    floor = ROUND_OFF * np.maximum(np.abs(first).max(axis=0), np.abs(second).max(axis=0))
+    safe = np.maximum(spread, np.maximum(floor, np.finfo(np.float64).tiny))
+    p_values: Array = 2.0 * student.sf(difference / safe, freedom)
     return p_values

@@ -33,7 +33,7 @@ enum {
     DEFAULT_BATCH_BYTES = 32 << 20,       /* a second of an ordinary network */
     DEFAULT_WAITING_BYTES = 256 << 20,    /* a restart of the service lasts seconds; small beside a solver */
     MAX_SPARES = 2,                       /* one for the solver to fill next, one just sent */
-    NPY_HEAD_BYTES = 128,                 /* as numpy pads it, and enough for three axes of 20 digits */
+    NPY_HEAD_BYTES = 128,                 /* as numpy pads it, and enough for all counts that take_resource lets in */
     WIRE_BYTES = 16 << 10,                /* longest head of an answer that is read */
     PIECE_BYTES = 1 << 20,                /* sent between two looks for an early answer */
     EXPECT_BYTES = 64 << 10,              /* larger bodies wait for "100 Continue" */
@@ -896,7 +896,7 @@ static void npy_head(char *out, size_t value_bytes, const size_t *counts, size_t
     out[9] = 0;
     int used = snprintf(out + 10, NPY_HEAD_BYTES - 10, "{'descr': '%cf%zu', 'fortran_order': False, 'shape': (%s), }",
                         order, value_bytes, shape);
-    out[10 + used] = ' ';
+    out[used < NPY_HEAD_BYTES - 11 ? 10 + used : NPY_HEAD_BYTES - 2] = ' '; /* over the final zero */
     out[NPY_HEAD_BYTES - 1] = '\n';
 }
 
@@ -905,6 +905,7 @@ static void npy_head(char *out, size_t value_bytes, const size_t *counts, size_t
 typedef struct batch {
     struct batch *next;
     size_t n;      /* snapshots in it */
+    int timed;     /* whether they come with times */
     double *times; /* (batch_snapshots) */
     char *bytes;   /* room for the NPY head, then (batch_snapshots, n_fields, n_points) values */
 } batch;
@@ -1081,7 +1082,7 @@ static void batch_target(const slackwater *run, const batch *b, text *target)
     (void)snprintf(number, sizeof number, "/batches/%lld", run->sequence);
     text_add(target, run->path);
     text_add(target, number);
-    for (size_t k = 0; run->timed == 1 && k < b->n; k++) {
+    for (size_t k = 0; b->timed && k < b->n; k++) {
         text_add(target, k == 0 ? "?time=" : "&time=");
         text_add_number(target, b->times[k]);
     }
@@ -1255,6 +1256,7 @@ static void *work(void *given)
     batch *b;
     while (!run->wire.cancelled && (prepare_spare(run), b = next_batch(run)) != NULL)
         post_batch(run, b);
+    wire_shut(&run->wire);
     pthread_mutex_lock(&run->lock);
     run->ended = 1;
     int abandoned = run->abandoned;
@@ -1614,6 +1616,7 @@ static int post(slackwater *run, double time, const void *const *fields, size_t 
     char *to = b->bytes + NPY_HEAD_BYTES + b->n * snapshot_bytes(run);
     for (size_t k = 0; k < n_fields; k++)
         copy_values(to + k * n_points * run->value_bytes, run->value_bytes, fields[k], bytes, n_points);
+    b->timed = time == time;
     b->times[b->n++] = time;
     return b->n == run->batch_snapshots ? hand_over(run) : SLACKWATER_OK;
 }

@@ -104,7 +104,7 @@ int main(int argc, char **argv)
             break;
         rest(setting(argc, argv, "pause_ms", 0));
     }
-    int advice = slackwater_advise(run);
+    int advice = slackwater_advise(run) == SLACKWATER_MAY_STOP;
     slackwater_state state;
     int result = setting(argc, argv, "detach", 0) > 0 ? slackwater_detach(run, &state, error)
                                                       : slackwater_close(run, &state, error);

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 from scipy.optimize import brentq
-from scipy.stats import chi2
+from scipy.special import gammainc
 
 from streaming.modal import ModalMoments, joined_scores, score_variance, variance_freedom
 
@@ -188,7 +188,9 @@ def _quantile(squares: Array, freedom: float, confidence: float) -> float:
     if largest <= 0.0:
         return 0.0
 
-    def excess(value: float) -> float:
-        return float(chi2.cdf(freedom * squares / value, freedom).mean()) - (1.0 - confidence)
+    def excess(logarithm: float) -> float:
+        below = gammainc(freedom / 2.0, freedom / 2.0 * relative * np.exp(-logarithm))  # P(chi2 < nu square / value)
+        return float(np.mean(below)) - (1.0 - confidence)
 
-    return float(brentq(excess, 1e-6 * largest, 1e9 * largest, rtol=1e-6))
+    relative = squares / largest
+    return largest * float(np.exp(brentq(excess, -14.0, 21.0, xtol=1e-5)))

@@ -64,8 +64,9 @@ def _trials(name: str, seeds: range, jobs: int, max_angle_deg: float) -> Iterato
 
 def _empty_table(runs: int, max_angle_deg: float) -> Table:
     table = Table(title=f"{runs} trials each, tolerance {max_angle_deg:g} deg, 95 % confidence")
-    for heading in ("process", "stopped", "false stops", "coverage", "median stop", "stop / oracle", "naive false"):
-        table.add_column(heading, justify="left" if heading == "process" else "right")
+    table.add_column("process", no_wrap=True)
+    for heading in ("stopped", "false stops", "coverage", "median stop", "stop / oracle", "naive false"):
+        table.add_column(heading, justify="right")
     return table
 
 

@@ -66,7 +66,10 @@ def gap_statistics(modal: ModalMoments, width: int) -> Array:
 
 
 def find_groups(modal: ModalMoments, n_modes: int, level: float = SEPARATION_LEVEL) -> Grouping:
-    """Group the leading modes until the group that holds mode ``n_modes`` is closed, taken whole."""
+    """Group the leading modes until the group that holds mode ``n_modes`` is closed, taken whole.
+
+    In a record with fewer directions than the basis has room for, the last group closes at the last direction.
+    """
     statistics = gap_statistics(modal, modal.width)
     critical = critical_value(modal.n_blocks, modal.width, level)
     groups: list[Group] = []
@@ -77,6 +80,8 @@ def find_groups(modal: ModalMoments, n_modes: int, level: float = SEPARATION_LEV
             start = gap + 1
             if start >= n_modes:
                 return Grouping(tuple(groups), None, statistics, critical)
+    if modal.complete and modal.n_scored == modal.rank:  # beyond the last mode there is nothing to tell it from
+        return Grouping((*groups, (start, modal.rank)), None, statistics, critical)
     return Grouping(tuple(groups), start, statistics, critical)
 
 

@@ -23,6 +23,7 @@ Array = npt.NDArray[np.float64]
 # Blocks joined in the variance of a mean, at every start. Two make a block 1/32 to 1/16 of the record; in trials
 # with known modes single blocks covered 91 to 95 % at a nominal 95 %, pairs 94 to 96 %.
 WIDTH = 2
+NOTHING_OUTSIDE = 1e-10  # share of the total energy that is round-off of rows in single precision
 MIN_BLOCKS_TO_JOIN = 8  # below, single blocks: a rough number is better than none while a run gathers
 
 
@@ -44,6 +45,7 @@ class ModalMoments:
     n_snapshots : N
     total_energy : variance of y, all rows together
     block_energies : (B,) mean of |y|^2 over each block, about the mean of the record
+    complete : the basis holds all there is, though the rows had room for more
     outside_level : mean variance of a direction outside the basis; 0 when the number of rows is not known
     """
 
@@ -58,6 +60,7 @@ class ModalMoments:
     n_snapshots: int
     total_energy: float
     block_energies: Array
+    complete: bool
     outside_level: float
 
     @property
@@ -107,6 +110,7 @@ def modal_moments(moments: Moments, n_leading: int, n_rows: int | None = None) -
     offsets = (moments.means - mean) @ view.T
     total = max(float(moments.energies.sum()) / moments.n_snapshots - moments.mean_energy, 0.0)
     left = 0 if n_rows is None else n_rows - rank
+    outside = max(total - float(values.sum()), 0.0)
     return ModalMoments(
         eigenvalues=values,
         rotation=rotation,
@@ -119,7 +123,8 @@ def modal_moments(moments: Moments, n_leading: int, n_rows: int | None = None) -
         n_snapshots=moments.n_snapshots,
         total_energy=total,
         block_energies=moments.block_energies(),
-        outside_level=max(total - float(values.sum()), 0.0) / left if left > 0 else 0.0,
+        complete=left > 0 and outside <= NOTHING_OUTSIDE * total,
+        outside_level=outside / left if left > 0 else 0.0,
     )
 
 

@@ -67,3 +67,13 @@ def test_a_group_that_does_not_close_says_where_it_begins() -> None:
     found = find_groups(modal, 4)
     assert found.open_start == 2
     assert found.separable == (1, 2)
+
+
+def test_a_record_of_four_directions_closes_at_the_fourth() -> None:
+    """Two travelling waves and nothing else: two pairs, whatever number of modes was asked for."""
+    t, x = np.arange(3200)[:, None], 2.0 * np.pi * np.arange(40) / 40
+    rows = np.cos(3 * x - 0.37 * t) + 0.5 * np.cos(5 * x - 0.91 * t)
+    moments = moments_of(rows, 32, rank=4)
+    for n_modes in (3, 4, 6):
+        found = find_groups(modal_moments(moments, 4, 40), n_modes)
+        assert (found.groups, found.open_start) == (((0, 2), (2, 4)), None)

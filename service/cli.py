@@ -24,7 +24,13 @@ app = typer.Typer(
 )
 
 # Commands of other parts: each module has register(app). Imported only here, so that what they need is their own.
-_PARTS = ("service.commands_wait", "service.commands_campaign", "service.demo.command", "streaming.calibration.command")
+_PARTS = (
+    "service.commands_wait",
+    "service.commands_campaign",
+    "service.commands_feed",
+    "service.demo.command",
+    "streaming.calibration.command",
+)
 
 
 def _show_version(wanted: bool) -> None:
@@ -99,7 +105,8 @@ def run_service(flags: Mapping[str, object], config: Path | None) -> None:
 def _setting_text(error: object) -> str:
     assert isinstance(error, dict)
     name = ".".join(str(part) for part in error["loc"])
-    return f"{name}: {error['msg']}" if name else str(error["msg"])
+    text = str(error["msg"]).removeprefix("Value error, ")
+    return f"{name}: {text}" if name else text
 
 
 def _refused(text: str) -> typer.Exit:

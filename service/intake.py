@@ -128,18 +128,30 @@ async def received(
 
 
 async def _pour(request: Request, service: Service, draft: Draft) -> None:
-    """Write the body to the draft, a piece at a time, in a thread of its own."""
+    """Write the body to the draft in a thread, one piece while the next one comes."""
     loop = asyncio.get_running_loop()
+    writing: asyncio.Future[None] | None = None
+    try:
+        async for piece in _pieces(request, service, draft):
+            if writing is not None:
+                await writing
+            writing = loop.run_in_executor(service.bodies, draft.write, piece)
+    finally:
+        if writing is not None:
+            await writing
+
+
+async def _pieces(request: Request, service: Service, draft: Draft) -> AsyncIterator[bytes]:
+    """The body in pieces of about PIECE_BYTES. Raises the 400 and 408 problems when it stops."""
     piece = bytearray()
     stream = request.stream().__aiter__()
     try:
         while True:
             async with asyncio.timeout(service.settings.body_idle_seconds):
                 chunk = await anext(stream, None)
-            if chunk is not None:
-                piece += chunk
+            piece += chunk or b""
             if piece and (chunk is None or len(piece) >= PIECE_BYTES):
-                await loop.run_in_executor(service.bodies, draft.write, bytes(piece))
+                yield bytes(piece)
                 piece.clear()
             if chunk is None:
                 return

@@ -32,7 +32,8 @@ class SlackwaterServer(uvicorn.Server):
 def listen(settings: Settings) -> socket.socket:
     """The listening socket; opened first, so that its port is known and a taken one is said plainly."""
     family = socket.AF_INET6 if ":" in settings.host else socket.AF_INET
-    listener = socket.socket(family, socket.SOCK_STREAM)
+    # With the protocol named, asyncio sends at once; without it each answer waits 40 ms for an acknowledgement.
+    listener = socket.socket(family, socket.SOCK_STREAM, socket.IPPROTO_TCP)
     listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
     listener.bind((settings.host.strip("[]"), settings.port))
     listener.listen(256)

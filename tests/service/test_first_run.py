@@ -196,3 +196,9 @@ def test_labels_change_and_runs_are_removed(service: RunningService) -> None:
     service.put(other, 0, snapshots(0, 30), headers={"Prefer": "wait=10"})
     assert not (service.data / "runs" / run).exists()
     assert not list((service.data / "deleted").iterdir())
+
+
+def test_answers_come_at_once(service: RunningService) -> None:
+    """An answer in two parts must not wait for the acknowledgement of the first, 40 ms on Linux (RFC 1122, 4.2.3.2)."""
+    taken = sorted(service.client.get("/livez").elapsed.total_seconds() for _ in range(15))
+    assert taken[3] < 0.03

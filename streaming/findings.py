@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 
 from streaming.declaration import Criterion
@@ -15,7 +16,9 @@ MIN_BLOCKS = 16  # fewer leave the variances with so few degrees of freedom that
 # Independent samples below which first-order bounds on angles fall short of their confidence.
 MIN_EFFECTIVE_SAMPLES = 100
 
-# Variance with longer blocks against the variance used; beyond, a block is shorter than the memory of the flow.
+# Variance with longer blocks against the variance used; beyond, a block is shorter than the memory of the flow. It
+# matters when the bound would pass the tolerance after two more such steps; in periodic flow, where no bound
+# stands near it, the ratio means nothing.
 MAX_PLATEAU = 1.5
 
 # Share of repeated snapshots that a restart may leave behind; more, and the source has stood still.
@@ -45,7 +48,7 @@ def _gathering(evidence: Evidence, criterion: Criterion, context: Context) -> It
             f"{MIN_EFFECTIVE_SAMPLES} are the least to judge from. Taking them closer together adds nothing."
         )
         yield Finding(State.GATHERING, "few-samples", text)
-    elif evidence.plateau > MAX_PLATEAU:
+    elif evidence.plateau > MAX_PLATEAU and evidence.bound_sine * evidence.plateau > _tolerance(criterion):
         text = (
             f"Blocks of {evidence.block_span} snapshots are shorter than the memory of the flow: the variance "
             f"still grows by a factor of {evidence.plateau:.2f} when they are joined."
@@ -86,11 +89,11 @@ def _inseparable(evidence: Evidence, criterion: Criterion) -> Iterator[Finding]:
     if start is None:
         return
     able = [n for n in evidence.grouping.separable if n <= criterion.n_modes]
-    hint = f"n_modes = {able[-1]} can be judged now" if able else "no number of leading modes can be judged now"
+    hint = f"With n_modes = {able[-1]} it could be judged now" if able else "No leading mode stands clear now"
     rank = evidence.modal.rank
     text = (
         f"Mode {min(criterion.n_modes, rank)} belongs to a group that begins at mode {start + 1} and does not close "
-        f"within the {rank} retained ones: their energies cannot be told apart yet. {hint[0].upper()}{hint[1:]}; "
+        f"within the {rank} retained ones: their energies cannot be told apart yet. {hint}; "
         "otherwise go on, or declare a larger retained_rank."
     )
     yield Finding(State.INSEPARABLE, "open-group", text)
@@ -120,6 +123,10 @@ def _hidden(evidence: Evidence, criterion: Criterion) -> Iterator[Finding]:
             "belong among the wanted modes. Declare a larger retained_rank."
         )
         yield Finding(State.UNSETTLED, "hidden-structure", text)
+
+
+def _tolerance(criterion: Criterion) -> float:
+    return math.sin(math.radians(criterion.max_angle_deg))
 
 
 def group_name(group: Group) -> str:

@@ -18,6 +18,7 @@ from streaming.verdict import Look, agreeing_looks
 LOOK_RATIO = 1.25
 
 MAX_RATIO = 1000.0  # beyond so many times the present record a forecast says nothing that one could plan with
+NO_GAP = 0.3  # of the gap needed to tell two modes apart; a smaller one is likely chance, and foretells nothing
 LEVEL = 0.9  # of the interval, common practice
 
 
@@ -77,18 +78,23 @@ def _other_needs(evidence: Evidence, criterion: Criterion, context: Context) -> 
     if criterion.max_energy_halfwidth is not None:
         known = [half for half in evidence.halfwidths if half is not None]
         ratios += [(half / criterion.max_energy_halfwidth) ** 2 for half in known] or [MAX_RATIO]
-    start = evidence.grouping.open_start
-    if start is not None:
-        ratios.append(_opening_need(evidence, start, criterion.n_modes))
     for ratio in ratios:
         yield Need(ratio, ratio, ratio)
+    start = evidence.grouping.open_start
+    if start is not None:
+        yield _opening_need(evidence, start, criterion.n_modes)
 
 
-def _opening_need(evidence: Evidence, start: int, n_modes: int) -> float:
-    """Record needed to close an open group at the clearest gap from the last wanted mode on; F grows like N."""
+def _opening_need(evidence: Evidence, start: int, n_modes: int) -> Need:
+    """Record needed to close an open group at the clearest gap from the last wanted mode on.
+
+    F grows like N where there is a gap; its root, the gap in standard errors, is known to about +- 1.6.
+    """
     statistics = evidence.grouping.statistics[max(start, n_modes - 1) :]
-    best = float(statistics.max(initial=0.0))
-    return evidence.grouping.critical / best if best > 0 else MAX_RATIO
+    gap, needed = math.sqrt(float(statistics.max(initial=0.0))), math.sqrt(evidence.grouping.critical)
+    if gap <= NO_GAP * needed:
+        return Need(MAX_RATIO, MAX_RATIO, MAX_RATIO)
+    return Need((needed / gap) ** 2, (needed / (gap + 1.6)) ** 2, (needed / max(gap - 1.6, NO_GAP)) ** 2)
 
 
 def _through_looks(n_snapshots: int, ratio: float, least: int) -> int:

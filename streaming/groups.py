@@ -16,8 +16,9 @@ from streaming.modal import ModalMoments, score_variance, variance_freedom
 Array = npt.NDArray[np.float64]
 Group = tuple[int, int]  # index range [start, stop) of the modes, counted from 0
 
-# Two modes count as separate when equal energies would give their gap in fewer than 5 % of records.
-SEPARATION_LEVEL = 0.95
+# Two modes count as separate when equal energies would give their gap in fewer than 1 % of records: a travelling
+# wave that falls apart by chance at a look makes the verdict flicker, and a group kept too long costs nothing.
+SEPARATION_LEVEL = 0.99
 
 
 @dataclass(frozen=True)

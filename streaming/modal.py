@@ -23,7 +23,7 @@ Array = npt.NDArray[np.float64]
 # Blocks joined in the variance of a mean, at every start. Two make a block 1/32 to 1/16 of the record; in trials
 # with known modes single blocks covered 91 to 95 % at a nominal 95 %, pairs 94 to 96 %.
 WIDTH = 2
-NOTHING_OUTSIDE = 1e-10  # share of the total energy that is round-off of rows in single precision
+NOTHING_OUTSIDE = 1e-6  # share of the total energy that is round-off of rows in single precision
 MIN_BLOCKS_TO_JOIN = 8  # below, single blocks: a rough number is better than none while a run gathers
 
 

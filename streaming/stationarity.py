@@ -15,6 +15,7 @@ Array = npt.NDArray[np.float64]
 
 MIN_BLOCKS = 8  # fewer values per half give the tests nothing to go by
 STARTUP_LEVEL = 0.001  # chance that a stationary record loses its first blocks at a look; they are lost for little
+RELEVANT_CHANGE = 0.05  # of an energy, or of a standard deviation; a smaller change may be sure and does not matter
 ROUND_OFF = 1e-9  # of the largest value of a series; smaller differences are arithmetic, not flow
 DRIFT_LEVEL = 0.005  # a false alarm only delays the verdict until a later look
 
@@ -66,10 +67,12 @@ def find_startup(moments: Moments, n_modes: int) -> Startup:
         return Startup(0, False)
     first, in_doubt = 0, False
     for values in series.T:
-        cut = mser(values)
-        within = min(cut, n_blocks // 2)
-        if cut and p_value_of_start(values, within) < STARTUP_LEVEL / n_series:
-            in_doubt |= cut > n_blocks // 2
+        cut, half = mser(values), n_blocks // 2
+        within = min(cut, half)
+        change = abs(float(values[:within].mean() - values[half:].mean())) if cut else 0.0
+        if change > RELEVANT_CHANGE and p_value_of_start(values, within) < STARTUP_LEVEL / n_series:
+            late = values[half:cut].mean() - values[cut:].mean() if cut > half else 0.0
+            in_doubt |= abs(float(late)) > RELEVANT_CHANGE
             first = max(first, within)
     return Startup(first, in_doubt)
 
@@ -79,7 +82,8 @@ def _startup_series(moments: Moments, n_modes: int) -> Array:
     n = min(n_modes, moments.rank)
     variances = np.einsum("bii->bi", moments.scatters[:, :n, :n]) / moments.counts[:, None]
     positive = np.concatenate([moments.block_energies()[:, None], variances], axis=1)
-    return np.concatenate([_logarithm(positive), moments.means[:, :n]], axis=1)
+    means = moments.means[:, :n] - moments.means[:, :n].mean(axis=0)
+    return np.concatenate([_logarithm(positive), _relative(means, variances.mean(axis=0))], axis=1)
 
 
 def p_value_of_start(values: Array, cut: int) -> float:
@@ -129,7 +133,10 @@ def _drift_series(modal: ModalMoments, n: int) -> Array:
     variances = np.einsum("bii->bi", second) + modal.eigenvalues[:n]
     rows, columns = np.triu_indices(n, 1)
     positive = np.concatenate([modal.block_energies[:, None], variances], axis=1)
-    return np.concatenate([_logarithm(positive), modal.means[:, :n], second[:, rows, columns]], axis=1)
+    energies = modal.eigenvalues[:n]
+    means = _relative(modal.means[:, :n], energies)
+    shears = _relative(second[:, rows, columns], energies[rows] * energies[columns])
+    return np.concatenate([_logarithm(positive), means, shears], axis=1)
 
 
 def _logarithm(positive: Array) -> Array:
@@ -139,8 +146,15 @@ def _logarithm(positive: Array) -> Array:
     return logarithm
 
 
+def _relative(values: Array, variances: Array) -> Array:
+    """Values (B, n) in standard deviations; zero where nothing varies."""
+    deviations = np.sqrt(variances)
+    relative: Array = np.divide(values, deviations, out=np.zeros_like(values), where=deviations > 0)
+    return relative
+
+
 def half_against_half(first: Array, second: Array) -> Array:
-    """Two-sided p-values of Welch's t on block values (b, n), their neighbours joined in pairs."""
+    """Two-sided p-values of Welch's t on block values (b, n), their neighbours joined in pairs; 1 for small changes."""
     joined = [0.5 * (part[0 : len(part) // 2 * 2 : 2] + part[1 : len(part) // 2 * 2 : 2]) for part in (first, second)]
     errors = [part.var(axis=0, ddof=1) / len(part) for part in joined]
     spread = np.sqrt(errors[0] + errors[1])
@@ -148,5 +162,5 @@ def half_against_half(first: Array, second: Array) -> Array:
     freedom = max(len(joined[0]) - 1, 1)
     floor = ROUND_OFF * np.maximum(np.abs(first).max(axis=0), np.abs(second).max(axis=0))
     safe = np.maximum(spread, np.maximum(floor, np.finfo(np.float64).tiny))
-    p_values: Array = 2.0 * student.sf(difference / safe, freedom)
+    p_values: Array = np.where(difference > RELEVANT_CHANGE, 2.0 * student.sf(difference / safe, freedom), 1.0)
     return p_values

@@ -84,3 +84,13 @@ def test_few_blocks_say_nothing() -> None:
     moments = moments_of(rng.standard_normal((40, 6)), 4)
     assert find_startup(moments, 3).first_block == 0
     assert find_drift(modal_moments(moments, 6), 3).p_value is None
+
+
+def test_a_sure_but_small_change_is_no_drift() -> None:
+    """Two per cent more energy in the second half, with so many snapshots that it is beyond doubt."""
+    rng = np.random.default_rng(6)
+    rows = rng.standard_normal((64_000, 6)) * DEVIATIONS
+    rows[32_000:] *= 1.01
+    moments = moments_of(rows, 64)
+    assert not find_drift(modal_moments(moments, 6), 3).drifting
+    assert find_startup(moments, 3).first_block == 0

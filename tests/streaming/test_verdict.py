@@ -97,12 +97,17 @@ class TestClauses:
         bad = {
             "start-up": {"startup": Startup(20, True)},
             "drift": {"drift": Drift(1e-5, True)},
-            "long-memory": {"plateau": 1.8},
             "hidden-structure": {"hidden": Hidden(1.0, 2.0, 0.5)},
             "open-group": {"grouping": dataclasses.replace(good.grouping, open_start=2)},
         }
         for code, change in bad.items():
             assert codes(dataclasses.replace(good, **change)) == {code}
+
+    def test_memory_longer_than_a_block_matters_near_the_tolerance(self) -> None:
+        growing = dataclasses.replace(evidence_of(), plateau=1.8)
+        assert codes(growing) == set()
+        near = Criterion(n_modes=3, max_angle_deg=1.2 * max(m.bound_deg for m in growing.misalignments))
+        assert codes(growing, near) == {"long-memory"}
 
     def test_short_records(self) -> None:
         rng = np.random.default_rng(1)

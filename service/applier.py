@@ -171,10 +171,10 @@ class Applier:
         before = self._place.board.get(self.run_id)
         stream.close()
         value = replace(before, n_absorbed=stream.n_snapshots, n_applied=stream.n_applied)
+        if len(stream.history) > self._n_looks:
+            self._record(stream.history[-1], before.verdict)
         if stream.n_applied:
-            report = stream.convergence()
-            value = value.with_report(report)
-            self._record(report, before.verdict)
+            value = value.with_report(stream.convergence())
         if stream.n_applied not in (0, *self._shelf.numbers):
             self._shelf.save(stream)
         self._place.board.put(self.run_id, value)

@@ -18,6 +18,7 @@ from service.reading import ALL, Reader
 from service.records import RunRecord
 from service.registry import Registry
 from service.settings import Settings
+from service.shelf import checkpoint_report
 from service.worker import Worker
 from streaming.report import Convergence
 
@@ -102,4 +103,7 @@ class Service:
             complete = last is not None and (last.first_snapshot or 0) + last.n_snapshots <= covered
             sequence = None if last is None else last.sequence - (not complete)
             value = Published(sequence if sequence is not None and sequence >= 0 else None, covered, covered)
-        return value if text is None else value.with_report(Convergence.model_validate_json(text))
+        looked = None if text is None else Convergence.model_validate_json(text)
+        saved = checkpoint_report(self.folders.run(run.id).checkpoint(covered)) if covered else None
+        reports = [report for report in (saved, looked) if report is not None]  # of equals the look is the last word
+        return value.with_report(max(reversed(reports), key=lambda one: one.n_snapshots)) if reports else value

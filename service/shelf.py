@@ -10,15 +10,18 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+import zarr
 
 from service.folders import RunFolder
 from service.leases import Leases
 from service.policy import covered_snapshots, surplus_checkpoints
 from service.reading import Reader
 from service.registry import Registry, add_event
+from streaming.checkpoint import STORE
 from streaming.declaration import RunDeclaration
 from streaming.errors import CheckpointError
 from streaming.files import check_manifest
+from streaming.report import Convergence
 from streaming.stream import SnapshotStream
 
 logger = logging.getLogger("slackwater")
@@ -89,6 +92,15 @@ class Shelf:
         self._registry.drop_checkpoints(self._run_id, [number])
         with self._registry.transaction() as db:
             add_event(db, self._run_id, "checkpoint-damaged", {"n_snapshots": number, "reason": reason})
+
+
+def checkpoint_report(path: Path) -> Convergence | None:
+    """The report that a checkpoint holds; None when it cannot be read, which its loading will then say."""
+    try:
+        text = zarr.open_group(path / STORE, mode="r", zarr_format=3).attrs["convergence"]
+        return Convergence.model_validate_json(str(text))
+    except (OSError, KeyError, ValueError):
+        return None
 
 
 def load_array(path: Path) -> npt.NDArray[Any] | None:

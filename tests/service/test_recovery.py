@@ -104,7 +104,7 @@ def test_restart_without_a_checkpoint(tmp_path: Path) -> None:
 
 def test_a_damaged_checkpoint_is_made_again(tmp_path: Path) -> None:
     data = tmp_path / "data"
-    with RunningService(data, environment={"SLACKWATER_CHECKPOINT_SHARE": "1"}) as service:  # one at each look
+    with RunningService(data, environment={"SLACKWATER_MAX_JOURNAL_BYTES": "1024"}) as service:  # at each block
         run = service.declare()
         for sequence in range(20):
             service.put(
@@ -211,6 +211,9 @@ def test_sigterm_under_load_loses_nothing(tmp_path: Path) -> None:
         assert acknowledged <= following <= acknowledged + 1
         post(service, run, range(following, following + 2))
         check_same(service, run, (following + 2) * BATCH)
+        final = service.client.get(f"/v1/runs/{run}/convergence").json()
+    with RunningService(data) as service:
+        assert service.client.get(f"/v1/runs/{run}/convergence").json() == final
 
 
 def test_runs_that_rest_give_way_and_come_back(tmp_path: Path) -> None:

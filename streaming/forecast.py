@@ -11,11 +11,9 @@ from scipy.stats import chi2
 from streaming.declaration import Criterion
 from streaming.evidence import Context, Evidence
 from streaming.findings import MIN_BLOCKS, MIN_EFFECTIVE_SAMPLES
+from streaming.looks import GROWTH
 from streaming.report import SnapshotsToGo
 from streaming.verdict import Look, agreeing_looks
-
-# Looks that can change the verdict are spaced by this factor: peeking more often costs confidence and saves little.
-LOOK_RATIO = 1.25
 
 MAX_RATIO = 1000.0  # beyond so many times the present record a forecast says nothing that one could plan with
 NO_GAP = 0.3  # of the gap needed to tell two modes apart; a smaller one is likely chance, and foretells nothing
@@ -99,5 +97,5 @@ def _opening_need(evidence: Evidence, start: int, n_modes: int) -> Need:
 
 def _through_looks(n_snapshots: int, ratio: float, least: int) -> int:
     """Snapshots until the first look at which the need is met, and not before ``least`` more looks."""
-    needed = math.ceil(math.log(min(max(ratio, 1.0), MAX_RATIO)) / math.log(LOOK_RATIO) - 1e-9)
-    return math.ceil(n_snapshots * (LOOK_RATIO ** max(needed, least) - 1.0))
+    needed = math.ceil(math.log(min(max(ratio, 1.0), MAX_RATIO)) / math.log(GROWTH) - 1e-9)
+    return math.ceil(n_snapshots * (GROWTH ** max(needed, least) - 1.0))

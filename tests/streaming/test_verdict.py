@@ -12,9 +12,10 @@ from streaming.assessment import Context, assess, report
 from streaming.declaration import Criterion
 from streaming.evidence import Evidence, gather
 from streaming.findings import failing_clauses
-from streaming.forecast import LOOK_RATIO, angle_need, forecast
+from streaming.forecast import angle_need, forecast
 from streaming.groups import Group
 from streaming.hidden import Hidden, hidden_structure
+from streaming.looks import GROWTH
 from streaming.modal import modal_moments
 from streaming.report import State
 from streaming.stationarity import Drift, Startup
@@ -186,7 +187,7 @@ class TestForecast:
         held = look(1000, 0.5, evidence.groups)
         foreseen = forecast(evidence, CRITERION, context, held)
         assert foreseen is not None
-        assert foreseen.estimate == math.ceil(1000 * (LOOK_RATIO - 1))
+        assert foreseen.estimate == math.ceil(1000 * (GROWTH - 1))
 
 
 class TestBetweenLooks:

@@ -2,7 +2,7 @@
 // lightness in CIE L*C*h (D65), told apart by people who confuse red and green; zero is neutral.
 
 const [NEUTRAL, END, HALF] = [96, 34, 128];
-const [BLUE, BROWN, CHROMA] = [270, 52, 40];
+const [BLUE, BROWN, CHROMA] = [280, 52, 44];
 const WHITE = [0.95047, 1.0, 1.08883];
 const FROM_XYZ = [[3.2406, -1.5372, -0.4986], [-0.9689, 1.8758, 0.0415], [0.0557, -0.204, 1.057]]; // IEC 61966-2-1
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import shutil
+import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
@@ -43,6 +44,14 @@ def _missing() -> str:
     except ImportError:
         return "page tests need the package playwright: pip install -e '.[test]'"
     return "" if CHROMIUM else "page tests need a browser: apt-get install chromium"
+
+
+def until(found: Callable[[], Any], seconds: float = WAIT_MILLISECONDS / 1000) -> None:
+    """Wait for something to be true; the browser's own waiting by text would need eval, which the page forbids."""
+    deadline = time.monotonic() + seconds
+    while not found():
+        assert time.monotonic() < deadline, f"not within {seconds} s"
+        time.sleep(0.05)
 
 
 class Watched:

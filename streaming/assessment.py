@@ -119,7 +119,7 @@ def report(assessment: Assessment, context: Context) -> Convergence:
             for index, group in enumerate(evidence.groups)
             for k in range(*group)
         ],
-        groups=[_group_report(assessment, index) for index in range(len(evidence.groups))],
+        groups=[_group_report(assessment, context, index) for index in range(len(evidence.groups))],
         stationarity=Stationarity(
             startup_snapshots=assessment.startup_snapshots,
             startup_in_doubt=evidence.startup.in_doubt,
@@ -141,7 +141,7 @@ def _mode_report(assessment: Assessment, context: Context, k: int, group: int) -
     energy = float(modal.eigenvalues[k])
     share = _share(energy, modal.total_energy)
     half = float(assessment.fraction_halfwidths[k])
-    peak = context.peak_frequencies[k] if k < len(context.peak_frequencies) else None
+    peak = context.motion.peaks[k] if k < len(context.motion.peaks) else None
     reference = context.reference
     return ModeReport(
         mode=k + 1,
@@ -156,7 +156,7 @@ def _mode_report(assessment: Assessment, context: Context, k: int, group: int) -
     )
 
 
-def _group_report(assessment: Assessment, index: int) -> GroupReport:
+def _group_report(assessment: Assessment, context: Context, index: int) -> GroupReport:
     evidence = assessment.evidence
     start, stop = evidence.groups[index]
     found = evidence.misalignments[index]
@@ -167,6 +167,7 @@ def _group_report(assessment: Assessment, index: int) -> GroupReport:
         truncation_angle_deg=found.truncation_deg,
         energy_halfwidth=evidence.halfwidths[index],
         settled=found.bound_deg <= assessment.criterion.max_angle_deg,
+        travelling=context.motion.pair_in((start, stop)),
     )
 
 

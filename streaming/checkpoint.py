@@ -1,7 +1,8 @@
 """Checkpoints: immutable directories of one zarr v3 group, with the results for readers and the state for going on.
 
-A manifest of digests lies beside the group ``fields.zarr``. The root of the group holds what people read (modes, mean, energies, coefficients, with named dimensions and units, for any
-reader of the format); the group ``state`` holds the exact arrays from which a stream goes on bit for bit.
+A manifest of digests lies beside the group ``fields.zarr``. The root of the group holds what people read (modes,
+mean, energies, coefficients, with named dimensions and units, for any reader of the format); the group ``state``
+holds the exact arrays from which a stream goes on bit for bit.
 """
 
 from __future__ import annotations
@@ -15,9 +16,10 @@ import numpy.typing as npt
 import zarr
 from zarr.codecs import Crc32cCodec
 
-from streaming.declaration import RectilinearGrid, RunDeclaration, UniformGrid
+from streaming.declaration import RunDeclaration
 from streaming.errors import CheckpointError
 from streaming.files import check_manifest, whole_directory
+from streaming.grid import grid_axes
 
 if TYPE_CHECKING:
     from streaming.stream import SnapshotStream
@@ -106,15 +108,10 @@ def _write_results(root: zarr.Group, stream: SnapshotStream) -> None:
 
 def _write_grid(root: zarr.Group, d: RunDeclaration, positions: Numbers | None) -> tuple[str, ...]:
     """Write the coordinates of the points and return the names of their dimensions."""
-    if isinstance(d.grid, UniformGrid):
-        origin = d.grid.origin or [0.0] * len(d.grid.shape)
-        axes = [o + h * np.arange(n) for o, h, n in zip(origin, d.grid.spacing, d.grid.shape, strict=True)]
-    elif isinstance(d.grid, RectilinearGrid):
-        axes = [np.asarray(axis) for axis in d.grid.axes]
-    else:
-        if positions is not None:
-            for axis, values in zip("xyz", positions.T, strict=False):
-                _write(root, axis, values, ("point",), long_name=f"{axis} coordinate", units="m")
+    axes = grid_axes(d)
+    if axes is None:
+        for axis, values in zip("xyz", [] if positions is None else positions.T, strict=False):
+            _write(root, axis, values, ("point",), long_name=f"{axis} coordinate", units="m")
         return ("point",)
     names = tuple(AXES[-len(axes) :])
     for name, values in zip(names, axes, strict=True):

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from streaming.declaration import Criterion, Reference
 from streaming.energies import group_halfwidth
@@ -11,6 +11,7 @@ from streaming.hidden import Hidden, hidden_structure
 from streaming.misalignment import Misalignment, misalignment, variance_plateau
 from streaming.modal import ModalMoments, modal_moments
 from streaming.moments import Moments
+from streaming.motion import Motion
 from streaming.stationarity import Drift, Startup, find_drift, find_startup
 from streaming.verdict import Look
 
@@ -33,7 +34,7 @@ class Context:
     previous : earlier looks, oldest first
     at_look : whether this evaluation may change the verdict
     reference : makes frequencies Strouhal numbers
-    peak_frequencies : of the leading modes, when they were computed; None where a mode has no clear peak
+    motion : peak frequencies and travelling pairs, as of the last look
     """
 
     n_snapshots: int
@@ -46,7 +47,7 @@ class Context:
     previous: tuple[Look, ...] = ()
     at_look: bool = True
     reference: Reference | None = None
-    peak_frequencies: tuple[float | None, ...] = ()
+    motion: Motion = field(default_factory=Motion)
 
 
 @dataclass(frozen=True)

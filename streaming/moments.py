@@ -90,8 +90,8 @@ class Moments:
     def block_energies(self) -> Array:
         """Mean of |y - mean|^2 over each block, (B,), about the mean of all blocks.
 
-        The datum is the mean of the first block alone; energies about it would swing with the flow. The part of the mean
-        that lies outside the basis is left out.
+        The datum is the mean of the first block alone; energies about it would swing with the flow. The part of
+        the mean that lies outside the basis is left out.
         """
         mean = self.mean()[: self.rank]
         energies: Array = self.energies / self.counts - 2.0 * (self.means[:, : self.rank] @ mean) + mean @ mean

@@ -49,6 +49,18 @@ class ModeReport(Model):
     strouhal: float | None = None
 
 
+class Travelling(Model):
+    """A pair whose coefficients are in quadrature, and the wave it makes where positions are known."""
+
+    modes: list[int]
+    frequency: float
+    coherence: float = Field(description="magnitude squared, 0 to 1, at that frequency")
+    phase_deg: float = Field(description="of the second coefficient against the first")
+    wave_length: float | None = None
+    velocity: list[float] | None = Field(default=None, description="of the phase: x, y, z, length per time of the run")
+    speed: float | None = Field(default=None, description="convection speed, the norm of the velocity")
+
+
 class GroupReport(Model):
     """Neighbouring modes that cannot be told apart, judged as one subspace. Angles in degrees."""
 
@@ -60,6 +72,7 @@ class GroupReport(Model):
         description="half-width of the group's energy, relative to it; null while a single block says nothing of it"
     )
     settled: bool
+    travelling: Travelling | None = Field(default=None, description="the pair that these modes belong to")
 
 
 class Stationarity(Model):

@@ -15,14 +15,15 @@ from streaming.assessment import Assessment, Context, assess, report
 from streaming.checkpoint import read_state, save_checkpoint
 from streaming.declaration import RunDeclaration
 from streaming.errors import ClosedError, DeclarationError, NotReadyError
+from streaming.grid import point_positions
 from streaming.intake import count_repeats, parse_positions, parse_snapshots, parse_times, parse_weights
 from streaming.ledger import Ledger, first_span
 from streaming.looks import LookPlan
 from streaming.moments import Moments
+from streaming.motion import MAX_SNAPSHOTS, Motion, find_motion
 from streaming.probes import N_PROBES
 from streaming.record import CoefficientRecord
 from streaming.report import Convergence, State
-from streaming.spectra import peak_frequencies
 from streaming.tall import TallRows, one_blas_thread
 from streaming.update import GRAM_CONDITION, Update, update_from_factor, update_from_gram
 
@@ -44,7 +45,6 @@ _COUNTERS = (
 
 # Between looks at its orthonormality the basis may be off by this many eps of its dtype, see `Update.bend`.
 STRAIGHT_BEND = 1e3
-MAX_SPECTRUM_SNAPSHOTS = 2**17  # the newest ones; bounds the memory and the time of a look
 STRAIGHT_BLOCKS = 16  # at the least, its own products are computed once in so many blocks
 
 
@@ -92,7 +92,7 @@ class SnapshotStream:
         self._previous: Float | None = None
         self._plan = LookPlan()
         self._current: tuple[int, Assessment] | None = None
-        self._peaks: tuple[float | None, ...] = ()
+        self._motion = Motion()
         self.n_applied = self.n_waiting = self.repeated_snapshots = 0
         self.discarded_energy = self.bend = 0.0
         self.total_energy = 0.0
@@ -210,17 +210,18 @@ class SnapshotStream:
     def _look(self) -> None:
         """Evaluate the criterion; only here the verdict may change."""
         assessment = self._assess(at_look=True)
-        self._peaks = self._find_peaks(assessment)
+        self._motion = self._find_motion(assessment)
         self._plan.take(self.n_applied, assessment.look, report(assessment, self._context(at_look=True)))
 
-    def _find_peaks(self, assessment: Assessment) -> tuple[float | None, ...]:
-        """Peak frequencies of the wanted modes, from the newest coefficients behind the statistics."""
-        n_modes = max((stop for _, stop in assessment.evidence.groups), default=0)
-        n_last = min(self.n_applied - assessment.startup_snapshots, MAX_SPECTRUM_SNAPSHOTS)
+    def _find_motion(self, assessment: Assessment) -> Motion:
+        """Peak frequencies and travelling pairs of the wanted modes, from the newest coefficients that count."""
+        groups = assessment.evidence.groups
+        n_last = min(self.n_applied - assessment.startup_snapshots, MAX_SNAPSHOTS)
         times, coordinates = self._record.read(n_last)
-        turn = assessment.mode_rotation[:, :n_modes]
+        turn = assessment.mode_rotation[:, : max((stop for _, stop in groups), default=0)]
         series = (coordinates[-n_last:, : len(turn)] - assessment.coordinate_mean) @ turn
-        return peak_frequencies(times[-n_last:], series)
+        positions = point_positions(self.declaration, self.positions)
+        return find_motion(times[-n_last:], series, positions, lambda part: self._fields(turn[:, part].T))
 
     def _assess(self, at_look: bool = False) -> Assessment:
         if self._current is None or self._current[0] != self.n_applied:
@@ -242,7 +243,7 @@ class SnapshotStream:
             previous=self._plan.looks,
             at_look=at_look,
             reference=self.declaration.reference,
-            peak_frequencies=self._peaks,
+            motion=self._motion,
         )
 
     def moments(self) -> Moments:
@@ -268,10 +269,13 @@ class SnapshotStream:
         W^(-1/2) u in field units; the sign of a mode, and any rotation within a group, are arbitrary.
         """
         turn = self._assess().mode_rotation
-        wanted = turn[:, : len(turn) if n is None else n].T
+        return self._fields(turn[:, : len(turn) if n is None else n].T)
+
+    def _fields(self, coefficients: Array) -> Float:
+        """W^(-1/2) (coefficients U) as (n, n_fields, n_points)."""
         with one_blas_thread():
-            fields = self._tall.combine_basis(wanted)
-        return fields.reshape(len(wanted), len(self.declaration.fields), self.declaration.n_points)
+            rows = self._tall.combine_basis(coefficients)
+        return rows.reshape(len(rows), len(self.declaration.fields), self.declaration.n_points)
 
     def mean(self) -> Array:
         """Return the mean of all applied snapshots, (n_fields, n_points), exact whatever was truncated."""
@@ -354,7 +358,7 @@ class SnapshotStream:
         self._previous = arrays.get("previous")
         self._record.fill(arrays["record_times"], arrays["record"])
         self._plan.restore(attributes["looks"])
-        self._peaks = tuple(mode.peak_frequency for report in self.history[-1:] for mode in report.modes)
+        self._motion = Motion.of_report(self.history[-1]) if self.history else Motion()
 
 
 def _parse_declaration(declaration: RunDeclaration | Mapping[str, Any]) -> RunDeclaration:

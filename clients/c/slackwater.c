@@ -1177,30 +1177,6 @@ static void wait_for_service(slackwater *run, double seconds, const char *error)
     (void)wire_wait(&run->wire, 0, seconds);
 }
 
-/* Send one batch until its fate is known, or the run is given up. */
-static void post_batch(slackwater *run, batch *b)
-{
-    size_t n = b->n;
-    for (int attempt = 0; !run->wire.cancelled; attempt++) {
-        char error[SLACKWATER_TEXT_BYTES] = "";
-        answer got;
-        enum fate fate = send_batch(run, b, &got, error);
-        enum next step = fate == ANSWERED ? after_answer(&got) : AGAIN;
-        if (fate == ANSWERED && step != DONE)
-            explain(&run->at, &got, error);
-        if (fate != GIVEN_UP && step != AGAIN) {
-            int regained = settle_batch(run, step, &got, error);
-            report_step(run, step, regained, n, error);
-            run->sequence += step == DONE; /* numbered when sent, so that a refused batch leaves no gap */
-        } else if (fate != GIVEN_UP) {
-            wait_for_service(run, pause_seconds(run, attempt, got.retry_after_seconds), error);
-        }
-        text_free(&got.body);
-        if (fate != GIVEN_UP && step != AGAIN)
-            return;
-    }
-}
-
 /* Have a warm spare ready for the solver, made outside of the lock. */
 static void prepare_spare(slackwater *run)
 {
@@ -1220,6 +1196,31 @@ static void prepare_spare(slackwater *run)
         keep_spare(run, b);
     pthread_cond_broadcast(&run->changed);
     pthread_mutex_unlock(&run->lock);
+}
+
+/* Send one batch until its fate is known, or the run is given up. */
+static void post_batch(slackwater *run, batch *b)
+{
+    size_t n = b->n;
+    for (int attempt = 0; !run->wire.cancelled; attempt++) {
+        char error[SLACKWATER_TEXT_BYTES] = "";
+        answer got;
+        prepare_spare(run); /* the solver has just taken the last one */
+        enum fate fate = send_batch(run, b, &got, error);
+        enum next step = fate == ANSWERED ? after_answer(&got) : AGAIN;
+        if (fate == ANSWERED && step != DONE)
+            explain(&run->at, &got, error);
+        if (fate != GIVEN_UP && step != AGAIN) {
+            int regained = settle_batch(run, step, &got, error);
+            report_step(run, step, regained, n, error);
+            run->sequence += step == DONE; /* numbered when sent, so that a refused batch leaves no gap */
+        } else if (fate != GIVEN_UP) {
+            wait_for_service(run, pause_seconds(run, attempt, got.retry_after_seconds), error);
+        }
+        text_free(&got.body);
+        if (fate != GIVEN_UP && step != AGAIN)
+            return;
+    }
 }
 
 /* The batch to send now; waits for one; NULL when the run ends. */
@@ -1254,7 +1255,7 @@ static void *work(void *given)
 {
     slackwater *run = given;
     batch *b;
-    while (!run->wire.cancelled && (prepare_spare(run), b = next_batch(run)) != NULL)
+    while (!run->wire.cancelled && (b = next_batch(run)) != NULL)
         post_batch(run, b);
     wire_shut(&run->wire);
     pthread_mutex_lock(&run->lock);
@@ -1569,9 +1570,9 @@ static int hand_over(slackwater *run)
     } else {
         append_waiting(run, run->filling);
         run->filling = b;
-        pthread_cond_broadcast(&run->changed);
     }
     pthread_mutex_unlock(&run->lock);
+    pthread_cond_broadcast(&run->changed); /* after the lock, so that the woken thread does not run into it */
     return outcome;
 }
 

@@ -20,6 +20,7 @@ Array = npt.NDArray[np.float64]
 
 N_DRAWS = 512  # of the multipliers; the 95 % quantile then has a relative standard error of about 1 %
 _KEY = 20_011  # fixed, so that one record has one bound
+LEAST_GAP = 0.25  # of an energy, to what was dropped; nearer than that a mode is as good as dropped itself
 _TINY = 1e-150  # of an energy; its square is still a normal number
 
 # The variance found with blocks twice as long may exceed the one used by this factor by chance (trials with known
@@ -136,11 +137,13 @@ def variance_plateau(modal: ModalMoments, groups: tuple[tuple[int, int], ...]) -
 def truncation_sine(modal: ModalMoments, group: tuple[int, int]) -> float:
     """Sine of the angle by which streaming has bent a group, seen by the probes.
 
-    Largest singular value of the residuals (C_wc u_k - Omega U' C_cc u_k) / (lambda_k p^(1/2)) of the group's modes.
+    Largest singular value of the residuals (C_wc u_k - Omega U' C_cc u_k) / p^(1/2) of the group's modes, each over the
+    gap to the directions just dropped; these have about the energy of the last retained mode.
     """
     start, stop = group
     inside = np.maximum(modal.eigenvalues[start:stop, None], _TINY)
-    return float(np.linalg.norm(modal.residuals[start:stop] / inside, 2))
+    gaps = np.maximum(inside - modal.eigenvalues[-1], LEAST_GAP * inside)
+    return float(np.linalg.norm(modal.residuals[start:stop] / gaps, 2))
 
 
 def _others(modal: ModalMoments, group: tuple[int, int]) -> npt.NDArray[np.int_]:

@@ -12,6 +12,7 @@ from streaming.assessment import Context, assess, report
 from streaming.declaration import Criterion, Reference
 from streaming.energies import fraction_halfwidths, group_halfwidth
 from streaming.modal import modal_moments
+from streaming.motion import Motion
 from streaming.noise import hard_threshold, noise_level
 from streaming.report import State
 from tests.streaming.direct_moments import moments_of
@@ -89,20 +90,20 @@ def test_degenerate_records_give_finite_numbers(rows: np.ndarray, n_blocks: int)
 
 def test_peaks_become_strouhal_numbers() -> None:
     reference = Reference(length=0.1, speed=10.0)
-    context = Context(1280, 20, reference=reference, peak_frequencies=(20.0, None))
+    context = Context(1280, 20, reference=reference, motion=Motion(peaks=(20.0, None)))
     said = report(assess(moments_of(rows_of(1280), 32), Criterion(n_modes=2), context), context)
     assert said.modes[0].strouhal == pytest.approx(0.2)
     assert said.modes[1].strouhal is None
 
 
 def test_one_evaluation_takes_under_fifty_milliseconds() -> None:
-    """Rank 40, 64 blocks, one thread; the best of several, so that a busy machine does not fail it."""
+    """Rank 40, 64 blocks, one thread: processor time, best of several, so that a busy machine does not fail it."""
     moments = moments_of(np.random.default_rng(6).standard_normal((6400, 60)) * 0.9 ** np.arange(60), 64, rank=40)
     criterion, context = Criterion(n_modes=6), Context(n_snapshots=6400, block_length=80, n_rows=60)
     taken = []
     with threadpool_limits(1):
-        for _ in range(7):
-            start = time.perf_counter()
+        for _ in range(12):
+            start = time.process_time()
             assess(moments, criterion, context)
-            taken.append(time.perf_counter() - start)
+            taken.append(time.process_time() - start)
     assert min(taken) < 0.05

@@ -28,6 +28,7 @@ _PARTS = (
     "service.commands_wait",
     "service.commands_campaign",
     "service.commands_feed",
+    "service.commands_watch",
     "service.demo.command",
     "streaming.calibration.command",
 )

@@ -19,7 +19,15 @@ EVEN_FRACTION = 1e-3  # of the step, up to which times and axes count as even
 
 
 def complete(members: Mapping[str, Any], file: DataFile, choice: Choice) -> RunDeclaration:
-    """Add name, fields, n_points, dtype, grid and time step where they are not given. Raises FeedError."""
+    """Add name, fields, n_points, dtype, grid and time step where they are not given.
+
+    Raises
+    ------
+    FeedError
+        if the file does not fit what is given
+    ValueError
+        if what is given is no declaration
+    """
     times = time_variable(file, choice)
     sources = _sources(file, choice, members, times)
     points = _point_shape(file, choice, sources, members, times)
@@ -38,7 +46,7 @@ def complete(members: Mapping[str, Any], file: DataFile, choice: Choice) -> RunD
     except ValidationError as error:
         first = error.errors()[0]
         place = ".".join(str(part) for part in first["loc"]) or "declaration"
-        raise FeedError(f"{place}: {first['msg']} (give it with --declaration)") from error
+        raise ValueError(f"{place}: {first['msg']}; see --declaration, --modes and --max-angle-deg") from error
 
 
 def _sources(file: DataFile, choice: Choice, members: Mapping[str, Any], times: Variable | None) -> list[Variable]:

@@ -315,3 +315,78 @@ def test_the_token_travels(declaration: dict[str, Any], make_snapshots: Make, re
         assert replay(guarded.url, declaration, make_snapshots(4)).code == OK
     finally:
         guarded.stop()
+
+
+@pytest.mark.parametrize("n_weights", [60, 120])
+def test_weights_shape_the_modes(
+    client: Client, service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays, n_weights: int
+) -> None:
+    """Modes are orthonormal in the weighted inner product, so they show which weights the service has."""
+    done = replay(service.url, declaration, make_snapshots(64), batch=16, weights=n_weights)
+    assert (done.code, done.told) == (OK, "")
+    modes = client.run(done.state["run"]).modes(2).reshape(2, -1)
+    weights = np.resize(np.arange(1.0, n_weights + 1.0), modes.shape[1])
+    np.testing.assert_allclose((modes * weights) @ modes.T, np.eye(2), rtol=0, atol=1e-4)
+
+
+def test_positions_arrive(
+    client: Client, service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays
+) -> None:
+    scattered = {**declaration, "grid": {"kind": "points"}}
+    done = replay(service.url, scattered, make_snapshots(8), axes=3)
+    assert (done.code, done.told) == (OK, "")
+    kept = np.load(service.data_directory / "runs" / done.state["run"] / "positions.npy")
+    np.testing.assert_array_equal(kept, 0.5 * np.arange(1.0, 181.0).reshape(60, 3))
+
+
+@pytest.mark.parametrize(
+    ("settings", "says"),
+    [
+        ({"weights": 59}, "no weights: 59 weights came; the run takes 60, or 60 for each of its 2 fields"),
+        ({"axes": 4}, "no positions: positions of 60 points on 4 axes came; the run has 60 points, on 1 to 3 axes"),
+        ({"axes": 2}, "no positions: The array does not fit the declaration (422): positions belong to a run whose"),
+    ],
+)
+def test_geometry_of_another_size_is_refused_with_the_reason(
+    service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays, settings: Any, says: str
+) -> None:
+    done = replay(service.url, declaration, make_snapshots(8), **settings)
+    assert says in done.told
+    assert done.code == OK
+
+
+def test_a_frozen_service_does_not_hold_the_solver_up(
+    mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays
+) -> None:
+    snapshots = make_snapshots(150)
+    started = replay.start(mortal_service.url, declaration, snapshots, batch=8, pause_ms=10, idle=0.5)
+    time.sleep(0.5)
+    mortal_service.freeze()
+    try:
+        time.sleep(1.5)
+    finally:
+        mortal_service.thaw()
+    done = started.result()
+    assert (done.code, done.state["sent"]) == (OK, 150)
+    assert "stood still" in done.told
+    assert done.state["longest_ms"] < 450.0  # a request stood still for 500 ms and more, so no post waited for one
+    with Client(mortal_service.url) as client:
+        check_holds_exactly(client.run(done.state["run"]), snapshots)
+
+
+@pytest.mark.campaign
+def test_a_service_away_for_half_a_minute_loses_nothing(
+    mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays
+) -> None:
+    snapshots = make_snapshots(4500)
+    started = replay.start(mortal_service.url, declaration, snapshots, batch=20, pause_ms=10)
+    time.sleep(3.0)
+    mortal_service.kill()
+    time.sleep(30.0)
+    mortal_service.start(wait=False)
+    done = started.result(timeout=200.0)
+    assert (done.code, done.state["sent"], done.state["lost"]) == (OK, 4500, 0)
+    with Client(mortal_service.url) as client:
+        run = client.run(done.state["run"])
+        assert check_stored(run, snapshots, 20) == 225
+        check_holds_exactly(run, snapshots)

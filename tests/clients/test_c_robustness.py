@@ -221,3 +221,35 @@ def test_an_error_text_cannot_write_to_the_terminal(talk: Callable[..., Any]) ->
     assert done.code == NO_RUN
     assert "\x1b" not in done.told
     assert len(done.told) < 600
+
+
+def test_the_end_is_in_time_although_a_name_look_up_hangs(
+    talk: Callable[..., Any], replay: Replays, tmp_path: Path
+) -> None:
+    """The client cannot interrupt getaddrinfo: it leaves the run to its thread and goes."""
+    source = tmp_path / "slow_names.c"
+    source.write_text(SLOW_NAMES)
+    run_tool([needed("gcc"), "-shared", "-fPIC", "-o", str(tmp_path / "slow_names.so"), str(source), "-ldl"])
+    replay.environment = {"LD_PRELOAD": str(tmp_path / "slow_names.so")}
+    began = time.monotonic()
+    done, _ = talk(Turn(plain("201 Created", RUN), closes=True), flush=0.3)
+    assert time.monotonic() - began < 4.0
+    assert (done.code, done.state["waiting"]) == (UNSENT, 16)
+
+
+# A look-up that works once and then hangs, in front of the real one.
+SLOW_NAMES = """
+#define _GNU_SOURCE
+#include <dlfcn.h>
+#include <netdb.h>
+#include <unistd.h>
+int getaddrinfo(const char *node, const char *service, const struct addrinfo *hints, struct addrinfo **found)
+{
+    static int calls;
+    int (*real)(const char *, const char *, const struct addrinfo *, struct addrinfo **);
+    real = dlsym(RTLD_NEXT, "getaddrinfo");
+    if (calls++ > 0)
+        sleep(10);
+    return real(node, service, hints, found);
+}
+"""

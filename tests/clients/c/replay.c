@@ -4,7 +4,9 @@
  *
  * VALUES is a file of float32 (or float64 with wide=1) values, snapshot by snapshot. Settings: batch, memory, hold,
  * start, idle, flush, wide, joined (all fields from one array), untimed, first (snapshot to begin with),
- * pause_ms (between posts), detach (instead of close), until_advice.
+ * pause_ms (between posts), detach (instead of close), until_advice, weights and axes (how many of which are put first:
+ * 1, 2, 3, ...).
+ * Reports the longest time that a post took, in milliseconds.
  * Prints one JSON object; ends with the result of the last call.
  */
 #define _POSIX_C_SOURCE 200809L
@@ -62,6 +64,32 @@ static int post(slackwater *run, double time, void *values, size_t n_fields, siz
                 : slackwater_post_float(run, time, narrow_fields, n_fields, n_points);
 }
 
+static double now_ms(void)
+{
+    struct timespec t;
+    (void)clock_gettime(CLOCK_MONOTONIC, &t);
+    return 1e3 * (double)t.tv_sec + 1e-6 * (double)t.tv_nsec;
+}
+
+/* Put 1, 2, 3, ... as weights, and 0.5 of them as positions. */
+static void put_geometry(slackwater *run, size_t n_weights, size_t n_points, size_t n_axes)
+{
+    char error[SLACKWATER_TEXT_BYTES] = "";
+    size_t n = n_weights > n_points * n_axes ? n_weights : n_points * n_axes;
+    double *values = malloc((n + 1) * sizeof *values);
+    if (values == NULL)
+        exit(94);
+    for (size_t k = 0; k < n; k++)
+        values[k] = (double)(k + 1);
+    if (n_weights > 0 && slackwater_put_weights(run, values, n_weights, error) != SLACKWATER_OK)
+        fprintf(stderr, "no weights: %s\n", error);
+    for (size_t k = 0; k < n; k++)
+        values[k] *= 0.5;
+    if (n_axes > 0 && slackwater_put_positions(run, values, n_points, n_axes, error) != SLACKWATER_OK)
+        fprintf(stderr, "no positions: %s\n", error);
+    free(values);
+}
+
 int main(int argc, char **argv)
 {
     char error[SLACKWATER_TEXT_BYTES];
@@ -91,6 +119,8 @@ int main(int argc, char **argv)
     size_t n_points = strtoul(argv[6], NULL, 10);
     int wide = setting(argc, argv, "wide", 0) > 0, joined = setting(argc, argv, "joined", 0) > 0;
     char *values = contents(argv[3], &n_bytes);
+    double longest_ms = 0.0;
+    put_geometry(run, (size_t)setting(argc, argv, "weights", 0), n_points, (size_t)setting(argc, argv, "axes", 0));
     size_t one = n_fields * n_points * (wide ? 8 : 4);
     for (size_t k = (size_t)setting(argc, argv, "first", 0); k < n_snapshots; k++) {
         double time = setting(argc, argv, "untimed", 0) > 0 ? NAN : 0.5 * (double)k + 1e-3 / 3.0;
@@ -98,7 +128,9 @@ int main(int argc, char **argv)
         if (copy == NULL)
             return 93;
         memcpy(copy, values + k % (n_bytes / one) * one, one);
+        double began = now_ms();
         counts[post(run, time, copy, joined ? 1 : n_fields, joined ? n_fields * n_points : n_points, wide)]++;
+        longest_ms = now_ms() - began > longest_ms ? now_ms() - began : longest_ms;
         free(copy);
         if (slackwater_advise(run) == SLACKWATER_MAY_STOP && setting(argc, argv, "until_advice", 0) > 0)
             break;
@@ -109,9 +141,9 @@ int main(int argc, char **argv)
     int result = setting(argc, argv, "detach", 0) > 0 ? slackwater_detach(run, &state, error)
                                                       : slackwater_close(run, &state, error);
     printf("{\"run\": \"%s\", \"result\": %d, \"advice\": %d, \"sent\": %lld, \"waiting\": %lld, \"lost\": %lld, "
-           "\"skipped\": %lld, \"held\": %lld, \"verdict\": \"%s\", \"posts\": [",
+           "\"skipped\": %lld, \"held\": %lld, \"longest_ms\": %.3f, \"verdict\": \"%s\", \"posts\": [",
            run_id, result, advice, state.sent_snapshots, state.waiting_snapshots, state.lost_snapshots,
-           state.skipped_snapshots, state.held_snapshots, state.verdict);
+           state.skipped_snapshots, state.held_snapshots, longest_ms, state.verdict);
     for (size_t k = 0; k < 9; k++)
         printf("%s%zu", k > 0 ? ", " : "", counts[k]);
     printf("]}\n");

@@ -1,7 +1,7 @@
 // Bound against tolerance over the length of the record, one line for each group of modes, both axes logarithmic, with
 // the forecast continued to the tolerance line.
 
-import { axis, colour, SERIES } from "./chart.js";
+import { axis, colour, rem, SERIES } from "./chart.js";
 import { capital, count, degrees, digits, groupName, rough, worst } from "./words.js";
 
 const MAX_GROUPS = SERIES.length; // more lines than this cannot be told apart
@@ -49,14 +49,14 @@ export function boundWords(found, run) {
 
 export function boundOptions(found, current) {
   const series = found.names.map((name, k) => ({
-    label: capital(name), stroke: () => colour(SERIES[k]), width: 2.5, spanGaps: true, dash: k % 2 ? [8, 3] : undefined,
-    points: { show: true, size: 6 }, value: (_, v) => (v === null ? "–" : `${digits(v)} deg`),
+    label: capital(name), stroke: () => colour(SERIES[k]), width: rem() / 7, spanGaps: true, dash: k % 2 ? [rem() / 2, rem() / 5] : undefined,
+    points: { show: true, size: rem() / 2.6 }, value: (_, v) => (v === null ? "–" : `${digits(v)} deg`),
   }));
-  const limit = { label: "Tolerance", stroke: () => colour("ink"), width: 2, points: { show: false },
+  const limit = { label: "Tolerance", stroke: () => colour("ink"), width: rem() / 8, points: { show: false },
     value: (_, v) => (v === null ? "–" : `${digits(v)} deg`) };
   return {
     scales: { x: { time: false, distr: 3, range: wholeRange }, y: { distr: 3, range: roomy } },
-    axes: [logAxis("snapshots in the basis"), logAxis("misalignment bound, deg")],
+    axes: [logAxis("snapshots in the basis", { size: 2 * rem() }), logAxis("bound, deg")],
     series: [{ label: "Snapshots", value: (_, v) => (v === null ? "–" : count(v)) }, ...series, limit],
     hooks: { draw: [(plot) => drawForecast(plot, current())] },
   };
@@ -70,8 +70,8 @@ function roomy(_, low, high) {
   return low === null ? [1, 90] : [low / 1.4, Math.min(180, high * 1.25)];
 }
 
-function logAxis(label) {
-  return axis(label, { splits: (_, index, low, high) => marks(low, high), values: (_, ticks) => ticks.map(short),
+function logAxis(label, extra = {}) {
+  return axis(label, { ...extra, splits: (_, index, low, high) => marks(low, high), values: (_, ticks) => ticks.map(short),
     filter: (_, ticks) => ticks });
 }
 
@@ -93,7 +93,7 @@ function drawForecast(plot, forecast) {
   if (!forecast) return;
   const at = ([x, y]) => [plot.valToPos(x, "x", true), plot.valToPos(y, "y", true)];
   const { ctx } = plot;
-  const unit = devicePixelRatio;
+  const unit = devicePixelRatio * rem() / 16;
   ctx.save();
   ctx.strokeStyle = colour("ink");
   ctx.lineWidth = 2 * unit;

@@ -8,12 +8,16 @@ export function colour(name) {
   return getComputedStyle(document.documentElement).getPropertyValue(`--${name}`).trim();
 }
 
+export function rem() {
+  return parseFloat(getComputedStyle(document.documentElement).fontSize);
+}
+
 export const SERIES = ["series-1", "series-2", "series-3", "series-4", "series-5", "series-6"];
 
 export function axis(label, extra = {}) {
-  const size = parseFloat(getComputedStyle(document.documentElement).fontSize);
+  const size = rem();
   const font = `${Math.round(0.8 * size)}px system-ui, sans-serif`;
-  return { label, font, labelFont: font, labelSize: 1.6 * size, stroke: () => colour("ink"),
+  return { label, font, labelFont: font, labelSize: 1.6 * size, size: 3 * size, gap: 0.3 * size, stroke: () => colour("ink"),
     grid: { stroke: () => colour("rule"), width: 1 }, ticks: { stroke: () => colour("rule"), width: 1 }, ...extra };
 }
 
@@ -55,7 +59,8 @@ export class Chart {
 
   #size() {
     const width = this.frame.clientWidth;
-    return { width, height: Math.round(Math.min(width * this.ratio, 0.7 * innerHeight)) };
+    const least = Math.min(width, 15 * rem()); // on a phone a flat chart would be all frame
+    return { width, height: Math.round(Math.max(least, Math.min(width * this.ratio, 0.7 * innerHeight))) };
   }
 
   #fit() {

@@ -5,7 +5,7 @@ import { h, say } from "./elements.js";
 import { largest, paint, scaleBar } from "./field.js";
 import { Motion } from "./motion.js";
 import { portraitOptions, travels, turning, turningWords } from "./portrait.js";
-import { capital, groupName } from "./words.js";
+import { capital, groupName, travellingWords } from "./words.js";
 
 const MAX_PICTURES = 8; // of one group: a wide group is noise, and its pictures say little
 
@@ -16,6 +16,7 @@ export class GroupFigure {
   #motion = null;
   #values = [];
   #checkpoint = 0;
+  #found = null;
 
   constructor(line, path, modes, declaration, plan) {
     Object.assign(this, { line, path, modes, declaration, plan, name: modes.join() });
@@ -35,8 +36,9 @@ export class GroupFigure {
       this.plan ? h("p", { class: "note" }, placeWords(this.plan)) : null) };
   }
 
-  async read(checkpoint, coefficients, field) {
-    this.#checkpoint = checkpoint;
+  // `travelling` is what the service found of the pair, or null
+  async read(checkpoint, coefficients, field, travelling) {
+    [this.#checkpoint, this.#found] = [checkpoint, travelling];
     if (this.plan) {
       const answers = await Promise.all(this.#pictures.map((one) =>
         this.line.npy(`${this.path}/modes/${one.mode}?checkpoint=${checkpoint}`)));
@@ -47,6 +49,7 @@ export class GroupFigure {
   }
 
   draw(field) {
+    if (this.plan && !this.#values.length) return; // not read yet
     const { name, unit } = this.declaration.fields[field];
     this.#pictures.forEach((one, k) => {
       const words = `Mode ${one.mode}, ${name}, at ${this.#checkpoint} snapshots`;
@@ -78,11 +81,11 @@ export class GroupFigure {
     const [a, b] = [column(0), column(1)];
     const turn = turning(a, b);
     const top = Math.max(largest(a), largest(b));
-    const words = turningWords(turn);
+    const words = travellingWords(this.#found, this.declaration.time.unit) || turningWords(turn);
     say(this.#turning, words);
     this.#portrait.show(String(top), () => portraitOptions(this.modes, top), [null, [a, b]],
       `Coefficients of modes ${this.modes.join(" and ")} against each other, the newest ${shape[0]} snapshots. ${words}`);
-    this.#motion?.turn(travels(turn) ? Math.sign(turn) : 0);
+    this.#motion?.turn(this.#found || travels(turn) ? Math.sign(turn) : 0);
   }
 
   recolour() { this.#portrait?.redraw(); }

@@ -8,6 +8,7 @@ import { parseNpy } from "./npy.js";
 const KINDS = ["declared", "changed", "evaluation", "checkpoint", "checkpoint-damaged",
   "closing", "closed", "failed", "deleted"];
 const REOPEN_MILLISECONDS = 1500; // about as long as a restart takes; the browser's own retry is 2 s
+const ANSWER_MILLISECONDS = 10000; // reading never waits for an update: a service this late is frozen or cut off
 
 let source = null;
 let address = null;
@@ -47,20 +48,28 @@ function heard(event) {
 function lost(which) {
   if (which !== source) return;
   postMessage({ kind: "lost" });
-  if (source.readyState !== EventSource.CLOSED) return;
+  if (source.readyState === EventSource.CLOSED) reopen();
+}
+
+function reopen() {
   clearTimeout(timer);
   timer = setTimeout(() => watch(address), REOPEN_MILLISECONDS);
 }
 
 async function ask({ id, path, as, options }) {
+  const late = new AbortController();
+  const alarm = setTimeout(() => late.abort(), ANSWER_MILLISECONDS);
   try {
-    const answer = await fetch(path, { cache: "no-cache", credentials: "same-origin", ...options });
+    const answer = await fetch(path, { cache: "no-cache", credentials: "same-origin", signal: late.signal, ...options });
+    clearTimeout(alarm); // what has begun to come may take its time
     const snapshots = answer.headers.get("Slackwater-Snapshots");
     const value = answer.ok ? await valueOf(answer, as) : await problemOf(answer);
     const owned = value instanceof Object && value.values instanceof Float32Array ? [value.values.buffer] : [];
     postMessage({ kind: "answer", id, status: answer.status, value, snapshots: Number(snapshots) }, owned);
   } catch {
+    clearTimeout(alarm);
     postMessage({ kind: "answer", id, status: 0, value: { title: "The service does not answer" } });
+    if (source) reopen(); // a stream that looks open may be cut off as well
   }
 }
 

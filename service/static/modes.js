@@ -73,16 +73,15 @@ export class ModesSection {
     this.#slider.setAttribute("aria-valuetext", this.#where.textContent);
     const then = reports.filter((one) => one.n_snapshots <= checkpoint.n_snapshots && one.groups.length);
     const groups = this.#wanted(run, then[then.length - 1]);
-    const key = JSON.stringify([checkpoint.n_snapshots, groups]);
+    const key = JSON.stringify([checkpoint.n_snapshots, groups.map((group) => [group.modes, group.travelling])]);
     if (key === this.#shown) return;
     this.#shown = key;
     this.#read(run, checkpoint.n_snapshots, groups);
   }
 
   #wanted(run, report) {
-    const all = (report?.groups || []).map((group) => group.modes);
-    const wanted = all.filter((modes) => modes[0] <= run.declaration.criterion.n_modes);
-    const shown = wanted.filter((modes, k) => k === 0 || modes[0] <= this.#n);
+    const wanted = (report?.groups || []).filter(({ modes }) => modes[0] <= run.declaration.criterion.n_modes);
+    const shown = wanted.filter(({ modes }, k) => k === 0 || modes[0] <= this.#n);
     this.#more.hidden = shown.length === wanted.length;
     return shown;
   }
@@ -96,8 +95,8 @@ export class ModesSection {
       const coefficients = groups.length ? await this.#coefficients(groups, checkpoint) : null;
       if (turn !== this.#drawing) return;
       this.#arrange(groups, declaration);
-      for (const group of this.#groups) {
-        await group.read(checkpoint, coefficients, this.#field);
+      for (const [k, group] of this.#groups.entries()) {
+        await group.read(checkpoint, coefficients, this.#field, groups[k].travelling || null);
         if (turn !== this.#drawing) return;
       }
       say(this.#trouble, "");
@@ -108,14 +107,14 @@ export class ModesSection {
   }
 
   #coefficients(groups, checkpoint) {
-    const n = Math.max(...groups.flat());
+    const n = Math.max(...groups.flatMap((group) => group.modes));
     return this.line.npy(`${this.path}/coefficients?n=${n}&last=${LAST_SNAPSHOTS}&checkpoint=${checkpoint}`);
   }
 
   // Figures stay in place while their group stays the same, so that a live page does not jump.
   #arrange(groups, declaration) {
     const old = new Map(this.#groups.map((group) => [group.name, group]));
-    this.#groups = groups.map((modes) => {
+    this.#groups = groups.map(({ modes }) => {
       const found = old.get(modes.join());
       old.delete(modes.join());
       return found || new GroupFigure(this.line, this.path, modes, declaration, this.#plan);

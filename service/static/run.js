@@ -98,7 +98,7 @@ export class RunView {
     this.#rate.note(performance.now() / 1000, run.n_snapshots);
     say(this.#name, declaration.name);
     this.#showLabels(declaration);
-    this.#panel.show(run, report);
+    this.#panel.show(run, report, reports[reports.length - 1]);
     document.title = `${answer(run)} · ${declaration.name}`;
     this.#bound.show(run, [...reports, report]);
     const quiet = this.#rate.quietSeconds(performance.now() / 1000);
@@ -146,7 +146,7 @@ function downloads(path, checkpoints) {
     `${path}/convergence/history`]];
   if (checkpoints.length) {
     links.push(["Checkpoint (zipped zarr)", checkpoints[0].archive], ["Modes (NPY)", `${path}/modes`],
-      ["Mean (NPY)", `${path}/mean`], ["Coefficients (NPY)", `${path}/coefficients`], ["Times (NPY)", `${path}/times`],
+      ["Mean (NPY)", `${path}/mean`], ["Mean (PNG)", `${path}/mean.png`], ["Coefficients (NPY)", `${path}/coefficients`], ["Times (NPY)", `${path}/times`],
       ["Singular values (NPY)", `${path}/singular-values`]);
   }
   return h("ul", { class: "downloads" }, links.map(([text, href]) => h("li", {}, h("a", { href, download: "" }, text))));

@@ -41,6 +41,15 @@ export function groupName(modes) {
   return first === last ? `mode ${first}` : `modes ${first} to ${last}`;
 }
 
+// What the service found of a travelling pair; empty when it found none.
+export function travellingWords(found, unit) {
+  if (!found) return "";
+  const wave = [found.wave_length ? `wave length ${digits(found.wave_length)}` : "",
+    found.speed ? `convection speed ${digits(found.speed)}` : ""].filter(Boolean).join(", ");
+  return `A travelling pair: ${digits(found.frequency)} per ${unit}, coherence ${digits(found.coherence, 2)}, `
+    + `phase ${degrees(found.phase_deg)}${wave ? `, ${wave}` : ""}.`;
+}
+
 export function capital(text) {
   return text.charAt(0).toUpperCase() + text.slice(1);
 }

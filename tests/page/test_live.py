@@ -53,3 +53,17 @@ def test_a_restart_leaves_no_double_points(watch: Callable[..., Watched], tmp_pa
         shown = page.evaluate("document.querySelector('.chart.bound').dataset.places").split()
         assert len(shown) == len(set(shown))
         assert set(shown) >= {str(one["n_snapshots"]) for one in looks if one["groups"]}
+
+
+@pytest.mark.campaign  # the page waits ten seconds before it believes it
+def test_a_frozen_service_is_noticed(watch: Callable[..., Watched], tmp_path: Path) -> None:
+    with RunningService(tmp_path / "data") as service:
+        run = declare(service)
+        page = watch(service.url).open(f"/runs/{run}")
+        page.locator(".verdict .answer", has_text="No data yet").wait_for()
+        service.process.send_signal(signal.SIGSTOP)
+        page.locator("#connection.lost").wait_for(timeout=30_000)
+        service.process.send_signal(signal.SIGCONT)
+        page.locator("#connection", has_text="Live").wait_for()
+        post(service, run, 0, 160)
+        page.locator(".intake", has_text="160 snapshots").wait_for()

@@ -75,7 +75,7 @@ def test_a_pair_has_its_portrait(watch: Callable[..., Watched], service: Running
     assert [2, 3] in [group["modes"] for group in groups]  # the travelling pair of the made-up flow
     page = watch(service.url).open(f"/runs/{run}")
     page.locator(".chart.portrait canvas").wait_for()
-    page.locator(".pair", has_text="a travelling structure").wait_for()
+    page.locator(".pair", has_text="travelling").wait_for()
     page.get_by_role("button", name="Show the pair in motion").click()
     moving = page.get_by_label("The pair in motion")
     moving.wait_for()

@@ -45,8 +45,7 @@ def test_the_answer(page: Any, changes: dict[str, Any], words: str) -> None:
 
 def test_the_summary_names_what_to_run_next(page: Any) -> None:
     def point(name: str, estimate: int | None = None, **changes: Any) -> dict[str, Any]:
-        made = run(snapshots_to_go=None if estimate is None else {"estimate": estimate}, **changes)
-        return {**made, "declaration": {**made["declaration"], "name": name}}
+        return run(name=name, snapshots_to_go=None if estimate is None else {"estimate": estimate}, **changes)
 
     points = [
         point("0 deg", verdict="settled"),
@@ -57,7 +56,7 @@ def test_the_summary_names_what_to_run_next(page: Any) -> None:
         point("10 deg", 900, verdict="drifting"),
         point("12 deg", 200, status="closed"),
     ]
-    said = page.evaluate("(runs) => import('/page/campaign.js').then(({ summaryOf }) => summaryOf(runs))", points)
+    said = page.evaluate("(points) => import('/page/campaign.js').then(({ summaryOf }) => summaryOf(points))", points)
     assert said == "1 of 7 settled. Drifting: 10 deg. Go on with 4 deg. Ended too early: 12 deg."
 
 
@@ -95,3 +94,33 @@ def test_npy_of_all_kinds_is_read(page: Any) -> None:
         )
         assert read[0] == [2, 3]
         assert read[1] == values.astype(np.float32).ravel().tolist()
+
+
+@pytest.mark.parametrize(
+    ("sampling", "ending"),
+    [
+        (None, "; the bounds of the points are not known yet."),
+        (12.0, ", more than the 12\u202fdeg that sampling may account for."),
+        (40.0, ", within the 40\u202fdeg that sampling alone may account for."),
+    ],
+)
+def test_a_comparison_is_held_against_its_sampling(page: Any, sampling: float | None, ending: str) -> None:
+    found = {"n_modes": 4, "angle_deg": 25.31, "sampling_deg": sampling}
+    said = page.evaluate("(found) => import('/page/compare.js').then((part) => part.comparedWords(found))", found)
+    assert said == f"The leading 4 modes lie 25.3\u202fdeg apart{ending}"
+
+
+def test_another_tolerance(page: Any) -> None:
+    """The sampling part falls like the inverse square root of the record: half the sine takes four times as long."""
+    double = math.degrees(math.asin(2 * math.sin(math.radians(5))))
+    group = {"modes": [1, 2], "angle_bound_deg": double, "truncation_angle_deg": 0.0}
+    easy = {"modes": [3], "angle_bound_deg": 1.0, "truncation_angle_deg": 0.0}
+    report = {"n_snapshots": 1000, "groups": [easy, group]}
+    cut = {"n_snapshots": 1000, "groups": [{**group, "truncation_angle_deg": 6.0}]}
+    script = """([report, cut]) => import("/page/whatif.js").then(({ recordNeeded }) =>
+        [recordNeeded(report, 5), recordNeeded(report, 40), recordNeeded(cut, 5)])"""
+    tight, loose, never = page.evaluate(script, [report, cut])
+    assert tight["total"] == pytest.approx(4000)
+    assert tight["group"]["modes"] == [1, 2]
+    assert loose["total"] < 1000
+    assert never is None

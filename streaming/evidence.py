@@ -120,6 +120,8 @@ def _grouped(moments: Moments, n_modes: int, n_rows: int | None) -> tuple[ModalM
 
 def wanted_groups(grouping: Grouping, n_modes: int, n_scored: int) -> tuple[Group, ...]:
     """Groups that hold the wanted modes; one that does not close is taken up to the last wanted mode."""
+    if n_scored == 0:  # data that never changed have no modes
+        return ()
     if grouping.open_start is None or grouping.open_start >= n_scored:
         return grouping.groups
     stop = max(grouping.open_start + 1, min(n_modes, n_scored))

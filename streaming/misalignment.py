@@ -155,7 +155,7 @@ def _gaps(modal: ModalMoments, group: tuple[int, int]) -> tuple[Array, Array]:
     """Gaps (q, R - q) to the modes outside the group and (q, 1) to what lies outside the basis; none is zero."""
     inside = modal.eigenvalues[group[0] : group[1], None]
     gaps = inside - modal.eigenvalues[_others(modal, group)]
-    smallest = max(1e-12 * float(modal.eigenvalues[0]), _TINY)
+    smallest = max(1e-12 * float(modal.eigenvalues.max(initial=0.0)), _TINY)
     return np.where(np.abs(gaps) < smallest, smallest, gaps), np.maximum(inside - modal.outside_level, smallest)
 
 

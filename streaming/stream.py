@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -12,6 +11,7 @@ import numpy.typing as npt
 from pydantic import ValidationError
 
 from streaming.assessment import Assessment, Context, assess, report
+from streaming.basis import EvolvingBasis
 from streaming.checkpoint import read_state, save_checkpoint
 from streaming.declaration import RunDeclaration
 from streaming.errors import ClosedError, DeclarationError, NotReadyError
@@ -21,31 +21,16 @@ from streaming.ledger import Ledger, first_span
 from streaming.looks import LookPlan
 from streaming.moments import Moments
 from streaming.motion import MAX_SNAPSHOTS, Motion, find_motion
+from streaming.novelty import Watch
 from streaming.probes import N_PROBES
 from streaming.record import CoefficientRecord
 from streaming.report import Convergence, State
-from streaming.tall import TallRows, one_blas_thread
-from streaming.update import GRAM_CONDITION, Update, update_from_factor, update_from_gram
+from streaming.tall import one_blas_thread
 
 Float = npt.NDArray[np.floating]
 Array = npt.NDArray[np.float64]
 
-_COUNTERS = (
-    "n_applied",
-    "n_waiting",
-    "repeated_snapshots",
-    "discarded_energy",
-    "bend",
-    "total_energy",
-    "first_time",
-    "applied_time",
-    "last_time",
-    "closed",
-)
-
-# Between looks at its orthonormality the basis may be off by this many eps of its dtype, see `Update.bend`.
-STRAIGHT_BEND = 1e3
-STRAIGHT_BLOCKS = 16  # at the least, its own products are computed once in so many blocks
+_COUNTERS = ("n_waiting", "repeated_snapshots", "first_time", "applied_time", "last_time", "closed")
 
 
 class SnapshotStream:
@@ -83,25 +68,37 @@ class SnapshotStream:
         self.declaration = _parse_declaration(declaration)
         self.positions = parse_positions(self.declaration, positions)
         d = self.declaration
-        self._tall = TallRows(d.n_rows, d.rank, d.length_of_block, d.real_dtype, parse_weights(d, weights))
+        self._basis = EvolvingBasis(d, parse_weights(d, weights))
         self._ledger = Ledger(d.rank, N_PROBES, first_span(d.length_of_block))
         self._record = CoefficientRecord(d.rank, d.length_of_block, record_path)
-        self._values: Array = np.zeros(0)
-        self._probes_basis: Array = np.zeros((N_PROBES, 0))
+        self._watch = Watch()
         self._times: list[Array] = []
         self._previous: Float | None = None
         self._plan = LookPlan()
         self._current: tuple[int, Assessment] | None = None
         self._motion = Motion()
-        self.n_applied = self.n_waiting = self.repeated_snapshots = 0
-        self.discarded_energy = self.bend = 0.0
-        self.total_energy = 0.0
+        self.n_waiting = self.repeated_snapshots = 0
         self.first_time: float | None = None
         self.applied_time: float | None = None
         self.last_time: float | None = None
         self.closed = False
 
     # -- in -----------------------------------------------------------------------------------------------
+
+    @property
+    def n_applied(self) -> int:
+        """Snapshots in the basis."""
+        return self._basis.n_snapshots
+
+    @property
+    def total_energy(self) -> float:
+        """Sum of |y|^2 over the snapshots in the basis, about the datum; exact whatever was truncated."""
+        return self._basis.total_energy
+
+    @property
+    def discarded_energy(self) -> float:
+        """Part of the total energy that truncation has dropped."""
+        return self._basis.discarded_energy
 
     @property
     def n_snapshots(self) -> int:
@@ -158,52 +155,25 @@ class SnapshotStream:
     def _wait(self, rows: Float, times: Array) -> None:
         self.repeated_snapshots += count_repeats(self._previous, rows)
         self._previous = rows[-1].copy()
-        self._tall.put(self.n_waiting, rows)
+        self._basis.put(self.n_waiting, rows)
         self._times.append(times)
         self.n_waiting += len(rows)
         self.first_time = float(times[0]) if self.first_time is None else self.first_time
         self.last_time = float(times[-1])
 
     def _apply_block(self) -> None:
-        """Update basis, ledger and record with the open block."""
-        n, times = self.n_waiting, np.concatenate(self._times)
+        """Update basis, ledger, watch and record with the open block."""
+        times = np.concatenate(self._times)
+        block = self._basis.apply(self.n_waiting)
         with one_blas_thread():
-            if self.n_applied == 0:
-                by_field = len(self.declaration.fields) if self.declaration.scaling == "unit-variance" else None
-                self._tall.set_datum(n, by_field)
-            rank = self._tall.rank
-            straight = (
-                self.bend < STRAIGHT_BEND
-                and (self.n_applied // self.declaration.length_of_block) % STRAIGHT_BLOCKS != 0
-            )
-            gram, probed = self._tall.project(n, straight)
-            step = self._update(gram, n)
-            self._ledger.carry(step.carried)
-            energies = np.diag(gram)[rank:]
-            self._ledger.add(step.coordinates, probed, energies, times)
-        self._record.append(times, step.coordinates, step.carried)
-        self._probes_basis = np.concatenate([self._probes_basis, probed.T], axis=1) @ step.transform.T
-        self._values, self.bend = step.singular_values, step.bend
-        self.total_energy += float(energies.sum())
-        self.discarded_energy += step.discarded_energy
-        self.n_applied, self.n_waiting, self._times = self.n_applied + n, 0, []
-        self.applied_time = float(times[-1])
+            self._ledger.carry(block.carried)
+            self._ledger.add(block.coordinates, block.probed, block.energies, times)
+        novelty = self._watch.judge(block.foreseen, block.energies)
+        self._watch = self._watch.learnt(novelty[:, 0]).carried(block.carried)
+        self._record.append(times, block.coordinates, block.carried, novelty)
+        self.n_waiting, self._times, self.applied_time = 0, [], float(times[-1])
         if self._plan.due(self.n_applied):
             self._look()
-
-    def _update(self, gram: Array, n: int) -> Update:
-        """Decide the update from the cheap Gram matrix, or from a second look at the rows, and turn the basis."""
-        rank, dtype = self.declaration.rank, self.declaration.dtype
-        step = update_from_gram(self._values, gram, rank, dtype, GRAM_CONDITION[dtype])
-        if step is not None:
-            self._tall.rotate(step.transform)
-            return step
-        if dtype == "float32":
-            step = update_from_gram(self._values, self._tall.gram_in_double(n), rank, dtype, math.inf)
-        step = step or update_from_factor(self._values, self._tall.factor(n), rank, dtype)
-        self._tall.rotate(step.transform)
-        self._tall.orthonormalise()
-        return step
 
     # -- the verdict ----------------------------------------------------------------------------------------
 
@@ -211,6 +181,13 @@ class SnapshotStream:
         """Evaluate the criterion; only here the verdict may change."""
         assessment = self._assess(at_look=True)
         self._motion = self._find_motion(assessment)
+        n_modes = max((stop for _, stop in assessment.evidence.groups), default=0)
+        self._watch = self._watch.set(
+            assessment.mode_rotation[:, :n_modes].T,
+            assessment.coordinate_mean,
+            assessment.eigenvalues[:n_modes],
+            assessment.evidence.effective_samples,
+        )
         self._plan.take(self.n_applied, assessment.look, report(assessment, self._context(at_look=True)))
 
     def _find_motion(self, assessment: Assessment) -> Motion:
@@ -221,7 +198,7 @@ class SnapshotStream:
         turn = assessment.mode_rotation[:, : max((stop for _, stop in groups), default=0)]
         series = (coordinates[-n_last:, : len(turn)] - assessment.coordinate_mean) @ turn
         positions = point_positions(self.declaration, self.positions)
-        return find_motion(times[-n_last:], series, positions, lambda part: self._fields(turn[:, part].T))
+        return find_motion(times[-n_last:], series, positions, lambda part: self._basis.fields(turn[:, part].T))
 
     def _assess(self, at_look: bool = False) -> Assessment:
         if self._current is None or self._current[0] != self.n_applied:
@@ -250,7 +227,7 @@ class SnapshotStream:
         """Return the block moments that all statistics are computed from, in the current basis."""
         if self.n_applied == 0:
             raise NotReadyError(f"no block applied yet: {self.n_waiting} of {self.declaration.length_of_block} are in")
-        return self._ledger.moments(self._probes_basis, self._tall.mean_energy(self.n_applied))
+        return self._ledger.moments(self._basis.probes_basis, self._basis.mean_energy())
 
     def convergence(self) -> Convergence:
         """Return the numbers and the verdict at this moment."""
@@ -269,19 +246,12 @@ class SnapshotStream:
         W^(-1/2) u in field units; the sign of a mode, and any rotation within a group, are arbitrary.
         """
         turn = self._assess().mode_rotation
-        return self._fields(turn[:, : len(turn) if n is None else n].T)
-
-    def _fields(self, coefficients: Array) -> Float:
-        """W^(-1/2) (coefficients U) as (n, n_fields, n_points)."""
-        with one_blas_thread():
-            rows = self._tall.combine_basis(coefficients)
-        return rows.reshape(len(rows), len(self.declaration.fields), self.declaration.n_points)
+        return self._basis.fields(turn[:, : len(turn) if n is None else n].T)
 
     def mean(self) -> Array:
         """Return the mean of all applied snapshots, (n_fields, n_points), exact whatever was truncated."""
         self.moments()
-        rows = self._tall.mean(self.n_applied)
-        return rows.reshape(len(self.declaration.fields), self.declaration.n_points)
+        return self._basis.mean()
 
     def singular_values(self) -> Array:
         """Return the singular values (q,) of the weighted fluctuations in the retained record, descending."""
@@ -299,6 +269,15 @@ class SnapshotStream:
         times, coordinates = self._record.read()
         turn = assessment.mode_rotation[:, : len(assessment.mode_rotation) if n is None else n]
         return times, (coordinates[:, : len(turn)] - assessment.coordinate_mean) @ turn
+
+    def novelty(self) -> tuple[Array, Array]:
+        """Return the times (N,) and how new each snapshot was when it came, (N, 4), columns `novelty.COLUMNS`.
+
+        Energy outside the basis and its limit, squared Hotelling distance in the wanted modes and its limit; NaN
+        where nothing was known yet.
+        """
+        self.moments()
+        return self._record.read_novelty()
 
     # -- state ------------------------------------------------------------------------------------------
 
@@ -331,34 +310,34 @@ class SnapshotStream:
 
     def export(self) -> tuple[dict[str, Any], dict[str, npt.NDArray[Any]]]:
         """Return the whole state: JSON-able attributes and arrays."""
-        times, coordinates = self._record.read()
-        arrays: dict[str, npt.NDArray[Any]] = {
-            **self._tall.export(self.n_waiting),
-            **{f"ledger_{name}": values for name, values in self._ledger.export().items()},
-            "singular_values": self._values,
-            "probes_basis": self._probes_basis,
-            "waiting_times": np.concatenate([np.zeros(0), *self._times]),
-            "record_times": times,
-            "record": coordinates,
-        }
+        attributes, arrays = self._basis.export(self.n_waiting)
+        arrays |= {f"ledger_{name}": values for name, values in self._ledger.export().items()}
+        arrays |= {f"watch_{name}": values for name, values in self._watch.export().items()}
+        arrays["record_times"], arrays["record"] = self._record.read()
+        arrays["record_novelty"] = self._record.read_novelty()[1]
+        arrays["waiting_times"] = np.concatenate([np.zeros(0), *self._times])
         if self.positions is not None:
             arrays["positions"] = self.positions
         if self._previous is not None:
             arrays["previous"] = self._previous
-        attributes = {name: getattr(self, name) for name in _COUNTERS}
+        attributes |= {name: getattr(self, name) for name in _COUNTERS}
         return {**attributes, "looks": self._plan.export()}, arrays
 
     def _restore(self, attributes: dict[str, Any], arrays: dict[str, npt.NDArray[Any]]) -> None:
         for name in _COUNTERS:
             setattr(self, name, attributes[name])
-        self._tall.restore(arrays, has_datum=self.n_applied > 0)
-        self._ledger.restore({k.removeprefix("ledger_"): v for k, v in arrays.items() if k.startswith("ledger_")})
-        self._values, self._probes_basis = arrays["singular_values"], arrays["probes_basis"]
+        self._basis.restore(attributes, arrays)
+        self._ledger.restore(_part(arrays, "ledger_"))
+        self._watch = Watch.of(_part(arrays, "watch_"))
         self._times = [arrays["waiting_times"]]
         self._previous = arrays.get("previous")
-        self._record.fill(arrays["record_times"], arrays["record"])
+        self._record.fill(arrays["record_times"], arrays["record"], arrays["record_novelty"])
         self._plan.restore(attributes["looks"])
         self._motion = Motion.of_report(self.history[-1]) if self.history else Motion()
+
+
+def _part(arrays: dict[str, npt.NDArray[Any]], prefix: str) -> dict[str, npt.NDArray[Any]]:
+    return {name.removeprefix(prefix): values for name, values in arrays.items() if name.startswith(prefix)}
 
 
 def _parse_declaration(declaration: RunDeclaration | Mapping[str, Any]) -> RunDeclaration:

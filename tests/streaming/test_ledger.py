@@ -84,13 +84,14 @@ def test_the_record_gives_all_coefficients_in_the_last_basis(tmp_path: Path, on_
     turns = [np.linalg.qr(RNG.standard_normal((R, R)))[0] for _ in range(4)]
     taken = [RNG.standard_normal((n, R)) for n in (10, 10, 10, 4)]
     for k, (turn, coordinates) in enumerate(zip(turns, taken, strict=True)):
-        record.append(10.0 * k + np.arange(len(coordinates)), coordinates, turn)
+        record.append(10.0 * k + np.arange(len(coordinates)), coordinates, turn, np.full((len(coordinates), 4), k))
     times, coefficients = record.read()
     expected = [taken[3], taken[2] @ turns[3].T, taken[1] @ (turns[3] @ turns[2]).T]
     np.testing.assert_allclose(coefficients[-4:], expected[0])
     np.testing.assert_allclose(coefficients[20:30], expected[1], atol=1e-14)
     np.testing.assert_allclose(coefficients[10:20], expected[2], atol=1e-14)
     assert len(times) == 34
-    record.fill(times, coefficients)
+    np.testing.assert_array_equal(record.read_novelty()[1][:, 2], [0] * 10 + [1] * 10 + [2] * 10 + [3] * 4)
+    record.fill(times, coefficients, np.zeros((34, 4)))
     np.testing.assert_array_equal(record.read()[1], coefficients)
     record.close()

@@ -446,8 +446,8 @@ static int address_parse(address *a, const char *url, const char *token, char *e
         say(error, "\"%s\" is no address of a service; it should look like http://127.0.0.1:8350", url);
         return SLACKWATER_REFUSED;
     }
-    if (token != NULL && (*token == '\0' || !is_plain(token))) {
-        say(error, "the token is empty or holds blanks or control characters");
+    if (token != NULL && !is_plain(token)) {
+        say(error, "the token holds blanks or control characters");
         return SLACKWATER_REFUSED;
     }
     size_t prefix = strlen(rest + n);
@@ -922,6 +922,7 @@ struct slackwater {
 
     batch *filling;
     int timed; /* whether posts come with times; -1 before the first */
+    double last_time;
     int resumes;
     double resume_after; /* posts up to this time are held already */
 
@@ -1359,6 +1360,7 @@ static slackwater *run_make(const slackwater_settings *wanted, char *error)
 {
     const char *url = wanted->url != NULL ? wanted->url : getenv("SLACKWATER_URL");
     const char *token = wanted->token != NULL ? wanted->token : getenv("SLACKWATER_TOKEN");
+    token = token != NULL && *token != '\0' ? token : NULL;
     slackwater *run = calloc(1, sizeof *run);
     pthread_condattr_t steady;
     if (run == NULL) {
@@ -1441,6 +1443,10 @@ slackwater *slackwater_declare(const slackwater_settings *settings, const char *
 {
     const slackwater_settings defaults = SLACKWATER_DEFAULTS, *wanted = settings != NULL ? settings : &defaults;
     say(error, "%s", "");
+    if (declaration == NULL) {
+        say(error, "there is no declaration");
+        return NULL;
+    }
     slackwater *run = run_make(wanted, error);
     request r = {"POST", "/v1/runs", "application/json", declaration, strlen(declaration)};
     return run == NULL ? NULL : start(run, wanted, &r, 1, error);
@@ -1451,7 +1457,7 @@ slackwater *slackwater_attach(const slackwater_settings *settings, const char *r
     const slackwater_settings defaults = SLACKWATER_DEFAULTS, *wanted = settings != NULL ? settings : &defaults;
     text target = {NULL, 0, 0, 0};
     say(error, "%s", "");
-    if (*run_id == '\0') {
+    if (run_id == NULL || *run_id == '\0') {
         say(error, "the id of the run is empty");
         return NULL;
     }
@@ -1576,30 +1582,42 @@ static int hand_over(slackwater *run)
     return outcome;
 }
 
-/* What to do with a snapshot of `time` before it is copied: OK takes it. */
+/* Say why a snapshot is not as declared; 0 when it is. */
+static int misfits(const slackwater *run, double time, size_t n_fields, size_t n_points, char *why)
+{
+    int timed = time == time; /* NaN differs from itself */
+    int joined = n_fields == 1 && n_points == run->n_fields * run->n_points;
+    if (!joined && (n_fields != run->n_fields || n_points != run->n_points))
+        say(why, "a snapshot of %zu x %zu values came; the run takes %zu fields x %zu points", n_fields, n_points,
+            run->n_fields, run->n_points);
+    else if (run->timed >= 0 && run->timed != timed)
+        say(why, "a snapshot came %s a time, those before %s; give times always or never", timed ? "with" : "without",
+            timed ? "without" : "with");
+    else if (timed && time - time != 0.0)
+        say(why, "a snapshot came with an infinite time");
+    else if (timed && run->timed == 1 && time <= run->last_time)
+        say(why, "times must increase: %.17g came after %.17g", time, run->last_time);
+    else
+        return 0;
+    return 1;
+}
+
+/* What to do with a snapshot before it is copied: OK takes it. */
 static int judge(slackwater *run, double time, size_t n_fields, size_t n_points)
 {
-    int timed = time == time, outcome = SLACKWATER_OK; /* NaN differs from itself */
-    int fits = n_fields == run->n_fields && n_points == run->n_points;
-    if (!fits && !(n_fields == 1 && n_points == run->n_fields * run->n_points))
-        outcome = SLACKWATER_MISFIT;
-    else if (run->timed >= 0 && run->timed != timed)
-        outcome = SLACKWATER_MISFIT;
-    else if (timed && run->resumes && time <= run->resume_after)
-        outcome = SLACKWATER_SKIPPED;
+    int outcome = SLACKWATER_OK;
     pthread_mutex_lock(&run->lock);
-    if (outcome == SLACKWATER_MISFIT)
-        say(run->state.last_error, "a snapshot of %zu x %zu values %s came; the run takes %zu x %zu, all %s", n_fields,
-            n_points, timed ? "with a time" : "without a time", run->n_fields, run->n_points,
-            run->timed < 0 ? "with times or all without" : run->timed ? "with times" : "without times");
-    if (outcome == SLACKWATER_SKIPPED)
+    if (misfits(run, time, n_fields, n_points, run->state.last_error)) {
+        outcome = SLACKWATER_MISFIT;
+    } else if (run->resumes && time <= run->resume_after) {
         run->state.skipped_snapshots++;
-    if (outcome == SLACKWATER_OK && run->stopped) {
+        outcome = SLACKWATER_SKIPPED;
+    } else if (run->stopped) {
         run->state.lost_snapshots++;
         outcome = SLACKWATER_STOPPED;
-    }
-    if (outcome == SLACKWATER_OK) {
-        run->timed = timed;
+    } else {
+        run->timed = time == time;
+        run->last_time = time;
         run->n_filling++;
     }
     pthread_mutex_unlock(&run->lock);

@@ -259,6 +259,15 @@ def test_a_snapshot_of_another_size_is_the_callers_fault(
     assert (done.code, done.state["posts"][MISFIT], done.state["sent"]) == (OK, 10, 0)
 
 
+def test_a_time_that_does_not_increase_is_the_callers_fault_and_costs_that_snapshot_only(
+    client: Client, service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays
+) -> None:
+    snapshots = make_snapshots(16)
+    done = replay(service.url, declaration, snapshots, batch=8, repeat=1)
+    assert (done.code, done.state["posts"][MISFIT], done.state["sent"]) == (OK, 16, 16)
+    assert check_stored(client.run(done.state["run"]), snapshots, 8) == 2
+
+
 def test_a_deleted_run_ends_the_posting_but_not_the_solver(
     client: Client, service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays
 ) -> None:

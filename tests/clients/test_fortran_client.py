@@ -75,7 +75,7 @@ def test_every_form_of_a_field_arrives_byte_for_byte(
     snapshots = make_snapshots(42)
     done = post_forms(service.url, declaration, snapshots)
     assert (done.code, done.state["sent"], done.state["error"]) == (0, 42, "")
-    assert "without a time came" in done.told
+    assert "a snapshot came without a time, those before with" in done.told
     run = client.run(done.state["run"])
     assert check_stored(run, snapshots, 8) == 6
     assert run.status == "closed"

@@ -4,7 +4,7 @@
  *
  * VALUES is a file of float32 (or float64 with wide=1) values, snapshot by snapshot. Settings: batch, memory, hold,
  * start, idle, flush, wide, joined (all fields from one array), untimed, first (snapshot to begin with),
- * pause_ms (between posts), detach (instead of close), until_advice, weights and axes (how many of which are put first:
+ * repeat (each post once more), pause_ms (between posts), detach (instead of close), until_advice, weights and axes (how many of which are put first:
  * 1, 2, 3, ...).
  * Reports the longest time that a post took, in milliseconds.
  * Prints one JSON object; ends with the result of the last call.
@@ -130,6 +130,8 @@ int main(int argc, char **argv)
         memcpy(copy, values + k % (n_bytes / one) * one, one);
         double began = now_ms();
         counts[post(run, time, copy, joined ? 1 : n_fields, joined ? n_fields * n_points : n_points, wide)]++;
+        for (int more = setting(argc, argv, "repeat", 0) > 0; more > 0; more--)
+            counts[post(run, time, copy, n_fields, n_points, wide)]++;
         longest_ms = now_ms() - began > longest_ms ? now_ms() - began : longest_ms;
         free(copy);
         if (slackwater_advise(run) == SLACKWATER_MAY_STOP && setting(argc, argv, "until_advice", 0) > 0)

@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
-import os
 import time
 from collections.abc import Callable
-from pathlib import Path
+from importlib.resources import files
 from typing import Any
 
 import pytest
@@ -31,12 +30,11 @@ def run(service: RunningService) -> str:
 
 @pytest.fixture(scope="module")
 def axe() -> str:
-    """The rules of axe-core (Deque, MPL-2.0), from where npm has put them."""
-    for folder in (os.environ.get("AXE_CORE", ""), "node_modules/axe-core", "/usr/lib/node_modules/axe-core"):
-        file = Path(folder) / "axe.min.js"
-        if folder and file.is_file():
-            return file.read_text()
-    pytest.skip("accessibility rules are missing: npm install --no-save axe-core, or set AXE_CORE to its folder")
+    """The rules of axe-core (Deque, MPL-2.0), as a package of the tests carries them."""
+    try:
+        return (files("axe_playwright_python") / "axe.min.js").read_text()
+    except ModuleNotFoundError:
+        pytest.skip("accessibility rules need the package axe-playwright-python: pip install -e '.[test]'")
 
 
 @pytest.mark.parametrize("scheme", ["light", "dark"])

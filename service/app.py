@@ -14,6 +14,7 @@ from service import (
     routes_batches,
     routes_campaigns,
     routes_events,
+    routes_export,
     routes_page,
     routes_plain,
     routes_results,
@@ -55,6 +56,7 @@ def create_app(service: Service) -> FastAPI:
     for routes in (
         routes_runs,
         routes_batches,
+        routes_export,  # before the results: /modes/1.vti is no mode called 1.vti
         routes_results,
         routes_campaigns,
         routes_events,

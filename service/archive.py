@@ -11,7 +11,7 @@ READ_BYTES = 2**20
 EPOCH = (1980, 1, 1, 0, 0, 0)  # the same bytes each time, whenever it is asked for
 
 
-class _Outlet(io.RawIOBase):
+class Outlet(io.RawIOBase):
     """Takes what the zip writer writes, until it is fetched."""
 
     def __init__(self) -> None:
@@ -33,7 +33,7 @@ class _Outlet(io.RawIOBase):
 
 def zipped(folder: Path, done: Callable[[], None]) -> Iterator[bytes]:
     """The bytes of the zip file; names start with the name of the folder."""
-    outlet = _Outlet()
+    outlet = Outlet()
     try:
         with zipfile.ZipFile(outlet, "w", zipfile.ZIP_STORED) as archive:
             for path in sorted(file for file in folder.rglob("*") if file.is_file()):

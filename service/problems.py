@@ -74,6 +74,8 @@ CATALOGUE: dict[str, ProblemType] = {
     ),
     "key-reused": ProblemType(422, "This Idempotency-Key came with other bytes before", "Use a new key for new data."),
     "no-picture": ProblemType(422, "This cannot be drawn", "Fetch the array instead."),
+    "no-place": ProblemType(422, "Nothing is known of where the points are", "Fetch the array as NPY instead."),
+    "export-too-large": ProblemType(422, "The export would be too large", "Ask for less, or take the archive."),
     "busy": ProblemType(429, "Too much is waiting to be applied", "Send again after Retry-After seconds."),
     "too-many-runs": ProblemType(429, "No room for another run", "Delete runs that are no longer needed."),
     "internal": ProblemType(500, "The service failed", "Look at the service's log; the request may be repeated."),

@@ -33,6 +33,11 @@ class Source:
         return zarr.open_group(self.path / STORE, mode="r", zarr_format=3)[name]
 
     @property
+    def attributes(self) -> dict[str, Any]:
+        """What the checkpoint says of itself: declaration, report, title."""
+        return zarr.open_group(self.path / STORE, mode="r", zarr_format=3).attrs.asdict()
+
+    @property
     def n_modes(self) -> int:
         return int(self.array("mode").shape[0])
 

@@ -19,6 +19,7 @@ from service import (
     routes_plain,
     routes_results,
     routes_runs,
+    routes_signals,
 )
 from service.answers import ProblemDocument
 from service.core import Service
@@ -58,6 +59,7 @@ def create_app(service: Service) -> FastAPI:
         routes_batches,
         routes_export,  # before the results: /modes/1.vti is no mode called 1.vti
         routes_results,
+        routes_signals,
         routes_campaigns,
         routes_events,
         routes_page,

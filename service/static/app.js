@@ -82,12 +82,23 @@ function otherTheme() {
   view.recolour();
 }
 
+// Paper is white: charts are drawn with the colours of the light page while it prints.
+function printing(begins) {
+  const root = document.documentElement;
+  if (begins) [root.dataset.before, root.dataset.theme] = [root.dataset.theme || "", "light"];
+  else if (root.dataset.before) root.dataset.theme = root.dataset.before;
+  else delete root.dataset.theme;
+  view.recolour();
+}
+
 line.addEventListener("live", () => stands(true));
 line.addEventListener("lost", () => stands(false));
 line.addEventListener("news", ({ detail }) => view.news(detail));
 line.addEventListener("token", askToken);
 addEventListener("hashchange", () => { go(); content.focus(); });
 document.addEventListener("visibilitychange", shownOrHidden);
+addEventListener("beforeprint", () => printing(true));
+addEventListener("afterprint", () => printing(false));
 document.getElementById("theme").addEventListener("click", otherTheme);
 matchMedia("(prefers-color-scheme: dark)").addEventListener("change", () => view.recolour());
 document.querySelector(".skip").addEventListener("click", (event) => {

@@ -1,7 +1,7 @@
 // Energies with their intervals as a table, each with a mark on a common logarithmic axis; text first, picture beside.
 
 import { h, svg, table, wide } from "./elements.js";
-import { digits, percent } from "./words.js";
+import { count, digits, percent } from "./words.js";
 
 const [WIDTH, HEIGHT, PAD] = [200, 20, 6];
 const LEAST_SHARE = 1e-6; // below this a share of the energy is not worth a longer axis
@@ -18,7 +18,7 @@ export function energyTable(report, n) {
   const rows = modes.map((one) => [String(one.mode), percent(one.energy_fraction),
     `${percent(one.energy_fraction_low)} to ${percent(one.energy_fraction_high)}`, mark(one, edge, place),
     ...(frequency ? [digits(one.peak_frequency)] : []), ...(strouhal ? [digits(one.strouhal)] : [])]);
-  const caption = "Energies of the modes, with intervals";
+  const caption = `Energies of the modes, with intervals, at ${count(report.n_snapshots)} snapshots`;
   return h("div", {}, wide(caption, table(caption, headings, rows, "numbers")),
     h("p", { class: "note" }, notes(report, edge)));
 }

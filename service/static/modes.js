@@ -23,8 +23,9 @@ export class ModesSection {
   #field = 0;
   #plan = null;
 
-  constructor(line, path) {
-    [this.line, this.path] = [line, path];
+  // `chosen` is told the evaluation of the checkpoint under the slider
+  constructor(line, path, chosen) {
+    [this.line, this.path, this.chosen] = [line, path, chosen];
     this.#slider.addEventListener("input", () => this.#draw());
     this.#more.addEventListener("click", () => { this.#n += FIRST_MODES; this.#draw(); });
     this.root = h("section", { class: "modes" }, h("h2", {}, "Modes"),
@@ -72,6 +73,7 @@ export class ModesSection {
     say(this.#where, `${count(checkpoint.n_snapshots)} snapshots${newest ? " (newest)" : ""}`);
     this.#slider.setAttribute("aria-valuetext", this.#where.textContent);
     const then = reports.filter((one) => one.n_snapshots <= checkpoint.n_snapshots && one.groups.length);
+    this.chosen(newest ? reports[reports.length - 1] : then[then.length - 1]);
     const groups = this.#wanted(run, then[then.length - 1]);
     const key = JSON.stringify([checkpoint.n_snapshots, groups.map((group) => [group.modes, group.travelling])]);
     if (key === this.#shown) return;

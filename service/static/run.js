@@ -26,7 +26,7 @@ export class RunView {
     [this.line, this.id] = [line, id];
     this.path = `/v1/runs/${encodeURIComponent(id)}`;
     this.events = `${this.path}/events`;
-    this.modes = new ModesSection(line, this.path);
+    this.modes = new ModesSection(line, this.path, (report) => this.#showEnergies(report));
     const part = (name, title) => {
       this.#parts[name] = h("div");
       return h("section", { class: name }, h("h2", {}, title), this.#parts[name]);
@@ -106,9 +106,13 @@ export class RunView {
     this.#fill("intake", intakeList(run, this.#rate));
     this.#fill("record", recordList(run, report));
     this.#fill("groups", groupTable(report, declaration.criterion));
-    this.#fill("energies", energyTable(report, declaration.criterion.n_modes + MORE_MODES));
+    if (!checkpoints.length) this.#showEnergies(report);
     this.#fill("take", downloads(this.path, checkpoints));
     this.modes.show(run, reports, report, checkpoints);
+  }
+
+  #showEnergies(report) {
+    if (report) this.#fill("energies", energyTable(report, this.#facts.run.declaration.criterion.n_modes + MORE_MODES));
   }
 
   #showLabels({ campaign, labels, reference, criterion }) {

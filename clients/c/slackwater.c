@@ -1284,6 +1284,12 @@ static wire patient_wire(double idle_seconds)
     return (wire){-1, -1, 0, 0, idle_seconds, 0, 0, {0}};
 }
 
+/* Whether the service may have acted on a request that failed: it has not when it was busy, starting or full. */
+static int may_have_arrived(enum fate fate, const answer *got)
+{
+    return fate == UNKNOWN || (got->status >= 500 && got->status != 503 && got->status != 507);
+}
+
 /* Send a request until it is answered for good, or `seconds` are over; `once` for requests that must not arrive
  * twice. Gives OK, REFUSED or NO_ANSWER; the caller frees the body. */
 static int call(slackwater *run, const request *r, double seconds, int once, answer *got, char *error)
@@ -1294,14 +1300,16 @@ static int call(slackwater *run, const request *r, double seconds, int once, ans
         enum fate fate = exchange(&w, &run->at, r, got, error);
         enum next step = fate == ANSWERED ? after_answer(got) : AGAIN;
         wire_shut(&w);
-        if (step == DONE)
+        if (step == DONE) {
+            say(error, "%s", ""); /* of tries before */
             return SLACKWATER_OK;
+        }
         if (fate == ANSWERED)
             explain(&run->at, got, error);
         double pause = pause_seconds(run, attempt, got->retry_after_seconds);
         if (step != AGAIN)
             return SLACKWATER_REFUSED;
-        if ((once && (fate == UNKNOWN || got->status >= 500)) || now_seconds() + pause > deadline)
+        if ((once && may_have_arrived(fate, got)) || now_seconds() + pause > deadline)
             return fate == ANSWERED ? SLACKWATER_REFUSED : SLACKWATER_NO_ANSWER;
         text_free(&got->body);
         (void)wire_wait(&w, 0, pause);

@@ -184,6 +184,19 @@ def test_what_may_pass_is_tried_again_under_the_same_number(talk: Callable[..., 
         assert batches[0].body == batches[1].body
 
 
+def test_a_declaration_waits_for_a_service_that_is_starting(talk: Callable[..., Any]) -> None:
+    done, peer = talk(Turn(plain("503 Service Unavailable")), Turn(plain("201 Created", RUN)), *GOOD)
+    assert (done.code, done.state["sent"], done.told) == (OK, 16, "")
+    assert [asked.head.split(" ")[1] for asked in peer.asked[:2]] == ["/v1/runs", "/v1/runs"]
+
+
+@pytest.mark.parametrize("status", ["500 Internal Server Error", "504 Gateway Timeout"])
+def test_a_declaration_that_may_have_been_taken_is_not_sent_twice(talk: Callable[..., Any], status: str) -> None:
+    done, peer = talk(Turn(plain(status)))
+    assert (done.code, len(peer.asked)) == (NO_RUN, 1)
+    assert f"answered with status {status[:3]}" in done.told
+
+
 def test_an_idle_connection_that_was_closed_is_no_failure(talk: Callable[..., Any]) -> None:
     done, peer = talk(Turn(plain("201 Created", RUN)), Turn(GOOD[0].answer, closes=True), *GOOD[1:], pause_ms=20)
     assert (done.code, done.state["sent"], done.told) == (OK, 16, "")

@@ -111,8 +111,8 @@ int main(int argc, char **argv)
     } else {
         run = slackwater_attach(&settings, argv[2], error);
     }
-    if (run == NULL)
-        fprintf(stderr, "no run: %s\n", error);
+    if (run == NULL || error[0] != '\0')
+        fprintf(stderr, "%s: %s\n", run == NULL ? "no run" : "a run, but", error);
     char run_id[128];
     (void)snprintf(run_id, sizeof run_id, "%s", slackwater_run_id(run));
     size_t n_snapshots = strtoul(argv[4], NULL, 10), n_fields = strtoul(argv[5], NULL, 10);

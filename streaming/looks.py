@@ -7,7 +7,7 @@ from typing import Any
 from streaming.report import Convergence
 from streaming.verdict import Look
 
-GROWTH = 1.25  # looks at n, 1.25 n, ...: 62 of them from 80 to 10^8 snapshots, so the history is bounded
+GROWTH = 1.1  # looks at n, 1.1 n, ...: 147 of them from 80 to 10^8 snapshots, so the history is bounded
 
 
 class LookPlan:

@@ -34,8 +34,9 @@ def calibrate(
 ) -> None:
     """Try the stopping rule on random flows whose modes are known, and count how often it stops too early.
 
-    The oracle knows the true modes and stops at the first of two looks in a row within tolerance. The naive rule stops
-    when the modes change by less than the tolerance between looks, twice in a row.
+    The oracle knows the true modes and stops at the first of two looks in a row within tolerance, even if they leave it
+    again; "lasting" is the look from which on they stay. The naive rule stops when the modes change by less than the
+    tolerance between looks, twice in a row.
     """
     names = process or list(PROCESSES)
     unknown = sorted(set(names) - set(PROCESSES))
@@ -65,7 +66,15 @@ def _trials(name: str, seeds: range, jobs: int, max_angle_deg: float) -> Iterato
 def _empty_table(runs: int, max_angle_deg: float) -> Table:
     table = Table(title=f"{runs} trials each, tolerance {max_angle_deg:g} deg, 95 % confidence")
     table.add_column("process", no_wrap=True)
-    for heading in ("stopped", "false stops", "coverage", "median stop", "stop / oracle", "naive false"):
+    for heading in (
+        "stopped",
+        "false stops",
+        "coverage",
+        "median stop",
+        "stop / oracle",
+        "stop / lasting",
+        "naive false",
+    ):
         table.add_column(heading, justify="right")
     return table
 
@@ -77,9 +86,14 @@ def _add_row(table: Table, name: str, summary: Summary) -> None:
         _percent(summary.false_stops),
         f"{100 * summary.coverage.fraction:.1f} %",
         "-" if summary.median_stop is None else f"{summary.median_stop:.0f}",
-        "-" if summary.ratio is None else f"{summary.ratio:.2f}",
+        _ratio(summary.ratio),
+        _ratio(summary.lasting_ratio),
         _percent(summary.naive_false_stops),
     )
+
+
+def _ratio(value: float | None) -> str:
+    return "-" if value is None else f"{value:.2f}"
 
 
 def _percent(share: Share) -> str:

@@ -44,6 +44,7 @@ class Summary:
     false_stops, naive_false_stops : out of all trials that stopped
     coverage : bounds that the truth kept, out of all bounds past gathering
     ratio : median over the trials of stop over oracle
+    lasting_ratio : the same over the length from which on the modes stayed within tolerance
     """
 
     n_trials: int
@@ -53,6 +54,7 @@ class Summary:
     coverage: Share
     median_stop: float | None
     ratio: float | None
+    lasting_ratio: float | None
 
 
 def summarise(trials: list[Trial]) -> Summary:
@@ -60,6 +62,7 @@ def summarise(trials: list[Trial]) -> Summary:
     stopped = [trial for trial in trials if trial.stop is not None]
     naive = [trial for trial in trials if trial.naive_stop is not None]
     ratios = [t.stop / t.oracle for t in stopped if t.stop is not None and t.oracle is not None]
+    lasting = [t.stop / t.lasting for t in stopped if t.stop is not None and t.lasting is not None]
     return Summary(
         n_trials=len(trials),
         n_stopped=len(stopped),
@@ -68,4 +71,5 @@ def summarise(trials: list[Trial]) -> Summary:
         coverage=Share(sum(t.covered for t in trials), sum(t.n_bounds for t in trials)),
         median_stop=median(t.stop for t in stopped if t.stop is not None) if stopped else None,
         ratio=median(ratios) if ratios else None,
+        lasting_ratio=median(lasting) if lasting else None,
     )

@@ -44,6 +44,7 @@ class Trial:
     stop : snapshots at the first settled verdict
     false_stop : a group was misaligned by more than the tolerance at the stop
     oracle : snapshots at the first of ``hold`` looks in a row at which the true angle is within tolerance
+    lasting : snapshots at the first look from which on the true angle stayed within tolerance to the end of the trial
     naive_stop, naive_false : the same for the rule "change between looks below tolerance, ``hold`` times in a row"
     covered, n_bounds : bounds of looks past gathering that the truth kept, and their number
     """
@@ -51,6 +52,7 @@ class Trial:
     stop: int | None
     false_stop: bool
     oracle: int | None
+    lasting: int | None
     naive_stop: int | None
     naive_false: bool
     covered: int
@@ -133,11 +135,22 @@ def outcome(seen: list[Seen], criterion: Criterion) -> Trial:
         stop=None if stop is None else stop.n_snapshots,
         false_stop=stop is not None and max(stop.angles) > tolerance,
         oracle=None if oracle is None else seen[oracle].n_snapshots,
+        lasting=_lasting(seen, tolerance),
         naive_stop=None if naive_look is None else naive_look.n_snapshots,
         naive_false=naive_look is not None and naive_look.true_angle > tolerance,
         covered=sum(true <= bound for true, bound in pairs),
         n_bounds=len(pairs),
     )
+
+
+def _lasting(seen: list[Seen], tolerance: float) -> int | None:
+    """Record length at the first look of the last unbroken run of looks within tolerance."""
+    length = None
+    for look in reversed(seen):
+        if look.true_angle > tolerance:
+            break
+        length = look.n_snapshots
+    return length
 
 
 def _first_run(flags: list[bool], length: int) -> int | None:

@@ -74,9 +74,9 @@ def test_binomial_interval() -> None:
 
 def test_summary_of_trials() -> None:
     trials = [
-        Trial(300, False, 100, 80, True, 9, 10),
-        Trial(200, True, 100, 90, False, 5, 10),
-        Trial(None, False, 100, None, False, 10, 10),
+        Trial(300, False, 100, 150, 80, True, 9, 10),
+        Trial(200, True, 100, None, 90, False, 5, 10),
+        Trial(None, False, 100, 100, None, False, 10, 10),
     ]
     found = summarise(trials)
     assert (found.n_stopped, found.false_stops, found.naive_false_stops) == (2, Share(1, 2), Share(1, 2))

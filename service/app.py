@@ -25,6 +25,7 @@ from service.answers import ProblemDocument
 from service.core import Service
 from service.headers import SecurityHeaders
 from service.middleware import Guard
+from service.readiness import tell_manager
 from service.translation import install
 
 DESCRIPTION = (
@@ -39,9 +40,11 @@ def create_app(service: Service) -> FastAPI:
     @asynccontextmanager
     async def lifespan(_: FastAPI) -> AsyncIterator[None]:
         service.start()
+        tell_manager("READY=1")  # the socket listens already, and recovery is done
         try:
             yield
         finally:
+            tell_manager("STOPPING=1")
             await asyncio.to_thread(service.close)
 
     app = FastAPI(

@@ -10,6 +10,7 @@ from typing import Annotated
 
 import typer
 
+from service import stop_file
 from service.commands_feed import INTERRUPTED, parse_fields_or_end
 from service.commands_wait import DEFAULT_URL, Url, failures_end_with_codes
 from service.feeding import options
@@ -49,6 +50,9 @@ def watch_folder(
     stop_when_settled: Annotated[
         bool, typer.Option("--stop-when-settled", help="End once the modes have settled; the run stays open.")
     ] = False,
+    touch: Annotated[
+        Path | None, typer.Option(metavar="FILE", help="Leave this stop file once the modes have settled.")
+    ] = None,
     variable: options.Variables = None,
     time: options.TimeVariable = None,
     time_axis: options.TimeAxis = None,
@@ -79,6 +83,8 @@ def watch_folder(
     choice = Choice(parse_fields_or_end(variable), time, parse_axis(time_axis), without_times, one_each)
     manner = Manner(pattern, order, settle, give_up, mark, max_batch_bytes, patience)
     with failures_end_with_codes(), Client(url) as client:
+        if touch is not None:
+            stop_file.check_place(touch)
         members = options.declared_members(declaration, name, campaign, modes, max_angle_deg)
         declare = partial(_declared, client, members, choice, (weights, positions))
         given = client.run(run) if run is not None else None
@@ -90,7 +96,7 @@ def watch_folder(
                     f"{folder} belongs to run {watcher.run.id} already, not to {given.id}; watch another folder, or "
                     f"delete {watcher.list.path}"
                 )
-            _watch(watcher, poll, end_after_idle, stop_when_settled)
+            _watch(watcher, poll, end_after_idle, stop_when_settled, touch)
         finally:
             watcher.list.close()
 
@@ -111,7 +117,9 @@ def _declared(
     return run
 
 
-def _watch(watcher: Watcher, poll: float, end_after_idle: float | None, stop_when_settled: bool) -> None:
+def _watch(
+    watcher: Watcher, poll: float, end_after_idle: float | None, stop_when_settled: bool, touch: Path | None
+) -> None:
     """Look until there is a reason to end."""
 
     def ended() -> bool:
@@ -120,6 +128,9 @@ def _watch(watcher: Watcher, poll: float, end_after_idle: float | None, stop_whe
     try:
         while True:
             watcher.poll(ended)
+            if touch is not None and watcher.may_stop:
+                stop_file.leave(touch, "settled: the run may stop")
+                touch = None  # once is enough
             if ended():
                 break
             if end_after_idle is not None and time.monotonic() - watcher.last_news > end_after_idle:

@@ -195,16 +195,17 @@ def watcher(folder: Path, run: Run, client: Client, **manner: Any) -> Watcher:
     return one
 
 
-@pytest.mark.parametrize("mark", [False, True])
 @pytest.mark.parametrize(
-    ("place", "after"),
+    ("place", "after", "mark"),
     [
-        ("list.add", False),
-        ("list.add", True),
-        ("run.post", False),
-        ("run.post", True),
-        ("_put_away", False),
-        ("_put_away", True),
+        ("list.add", False, False),
+        ("list.add", True, False),
+        ("run.post", False, False),
+        ("run.post", True, False),
+        ("_put_away", False, False),
+        ("_put_away", True, False),
+        ("run.post", True, True),
+        ("_put_away", False, True),
     ],
 )
 def test_killed_before_and_after_every_step(

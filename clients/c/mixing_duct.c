@@ -68,8 +68,8 @@ int main(void)
 {
     char error[SLACKWATER_TEXT_BYTES];
     slackwater_settings settings = SLACKWATER_DEFAULTS;
-    /* This toy makes a thousand snapshots in a second. So that the advice does not come late, it sends large batches and
-     * lets itself be held while two wait. A solver that takes seconds for a step passes NULL for settings. */
+    /* This toy makes a thousand snapshots in a second. So that the advice does not come late, it sends large batches
+     * and lets itself be held while two wait. A solver that takes seconds for a step passes NULL for settings. */
     settings.batch_snapshots = 64;
     settings.max_waiting_bytes = 3 * 64 * sizeof temperature;
     settings.hold_seconds = 30.0;

@@ -41,6 +41,20 @@ def test_the_small_parts_hold_under_sanitizers(tmp_path: Path) -> None:
     run_tool([str(program)])
 
 
+def check_damaged_answers(directory: Path, n_tries: int, seed: int) -> None:
+    program = compiled(directory / "fuzz", [C_PROGRAMS / "fuzz_answers.c"], flags=["-fsanitize=address,undefined"])
+    run_tool([str(program), str(n_tries), str(seed)])
+
+
+def test_damaged_answers_do_no_harm(tmp_path: Path) -> None:
+    check_damaged_answers(tmp_path, 20_000, 1)
+
+
+@pytest.mark.campaign
+def test_many_damaged_answers_do_no_harm(tmp_path: Path) -> None:
+    check_damaged_answers(tmp_path, 1_000_000, 2)
+
+
 @pytest.mark.parametrize("sanitizer", ["thread", "address,undefined"])
 def test_a_run_is_clean_under_sanitizers(
     service: Service, declaration: dict[str, Any], make_snapshots: Make, tmp_path: Path, sanitizer: str

@@ -44,7 +44,8 @@ static void check_numbers(void)
 
 static void check_json(void)
 {
-    const char *object = " { \"a\\\"b\" : [1, {\"x\": \"}\"}], \"n\":7 ,\"s\":\"one \\\"two\\\"\\n\\u00e9\\u20ac\\ud83d\\u0000.\","
+    const char *object = " { \"a\\\"b\" : [1, {\"x\": \"}\"}], \"n\":7 ,"
+                         "\"s\":\"one \\\"two\\\"\\n\\u00e9\\u20ac\\ud83d\\u0000.\","
                          "\"list\":[{}, [], \"]\" , null], \"empty\": [] } ";
     char words[64];
     CHECK(json_integer(json_member(object, "n"), -1) == 7);
@@ -54,7 +55,8 @@ static void check_json(void)
     CHECK(json_words(json_member(object, "s"), words, 9) && strcmp(words, "one \"") == 0);
     CHECK(!json_words(json_member(object, "n"), words, sizeof words) && words[0] == '\0');
     CHECK(json_count(json_member(object, "list")) == 4 && json_count(json_member(object, "empty")) == 0);
-    const char *broken[] = {"", "{", "{\"n\"", "{\"n\":", "{\"n\":}", "{\"n\" 1}", "{\"n\":\"\\", "{\"n\":[1,}", "{\"n\":[1 2]}",
+    const char *broken[] = {"", "{", "{\"n\"", "{\"n\":", "{\"n\":}", "{\"n\" 1}", "{\"n\":\"\\",
+                            "{\"n\":[1,}", "{\"n\":[1 2]}",
                             "{\"n\":{\"m\"}}", "[1]", "{n:1}", "{\"m\":1 \"n\":2}", "{\"n\":\"\\u12"};
     for (size_t k = 0; k < sizeof broken / sizeof *broken; k++)
         check(json_member(broken[k], "n") == NULL, broken[k]);

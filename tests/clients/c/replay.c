@@ -4,8 +4,8 @@
  *
  * VALUES is a file of float32 (or float64 with wide=1) values, snapshot by snapshot. Settings: batch, memory, hold,
  * start, idle, flush, wide, joined (all fields from one array), untimed, first (snapshot to begin with),
- * repeat (each post once more), pause_ms (between posts), detach (instead of close), until_advice, weights and axes (how many of which are put first:
- * 1, 2, 3, ...).
+ * repeat (each post once more), pause_ms (between posts), detach (instead of close), until_advice, weights and axes
+ * (how many of which are put first: 1, 2, 3, ...).
  * Reports the longest time that a post took, in milliseconds.
  * Prints one JSON object; ends with the result of the last call.
  */

@@ -14,28 +14,28 @@ pytestmark = pytest.mark.timeout(60)
 STEP, FREQUENCY = 0.01, 6.25
 
 
-def _wave(start: int, stop: int) -> np.ndarray:
-    """A wave of 6.25 Hz over the panel, from snapshot 300 on with a pattern that was not there before."""
+def _wave(start: int, stop: int, burst_from: int) -> np.ndarray:
+    """A wave of 6.25 Hz over the panel; from ``burst_from`` on with a pattern that was not there before."""
     x = np.linspace(0, 2 * np.pi, 48)
     rows = []
     for k in range(start, stop):
         phase = 2 * np.pi * FREQUENCY * STEP * k
         noise = np.random.default_rng((9, k)).standard_normal((2, 48))
-        burst = 30.0 * np.where(np.arange(48) == 20, 1.0, 0.0) if k >= 300 else 0.0
+        burst = 30.0 * np.where(np.arange(48) == 20, 1.0, 0.0) if k >= burst_from else 0.0
         rows.append(np.stack([np.cos(x - phase), np.sin(x - phase)]) + 0.05 * noise + burst)
     return np.array(rows, np.float32)
 
 
-@pytest.fixture(scope="module")
-def run(service: RunningService) -> str:
+def _closed_run(service: RunningService, burst_from: int) -> str:
     made = service.declare(reference={"length": 0.2, "speed": 5.0})
     for sequence in range(8):
-        service.put(made, sequence, _wave(40 * sequence, 40 * (sequence + 1)))
+        service.put(made, sequence, _wave(40 * sequence, 40 * (sequence + 1), burst_from))
     service.client.post(f"/v1/runs/{made}/close")
     return made
 
 
-def test_the_peak_of_a_wave(service: RunningService, run: str) -> None:
+def test_the_peak_of_a_wave(service: RunningService) -> None:
+    run = _closed_run(service, burst_from=10**6)
     found = service.client.get(f"/v1/runs/{run}/spectra").json()
     frequencies, densities = np.array(found["frequencies"]), np.array(found["densities"])
     assert densities.shape == (2, len(frequencies))
@@ -48,7 +48,8 @@ def test_the_peak_of_a_wave(service: RunningService, run: str) -> None:
     assert max(few["densities"][0]) == max(found["densities"][0])
 
 
-def test_a_new_pattern_is_beyond_its_limit(service: RunningService, run: str) -> None:
+def test_a_new_pattern_is_beyond_its_limit(service: RunningService) -> None:
+    run = _closed_run(service, burst_from=300)
     found = service.client.get(f"/v1/runs/{run}/novelty").json()
     assert len(found["times"]) == 320
     outside, limit = (np.array(found[name], dtype=float) for name in ("outside", "outside_limit"))

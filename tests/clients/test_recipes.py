@@ -6,6 +6,7 @@ import os
 import re
 import shutil
 import subprocess
+import sys
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -28,7 +29,12 @@ def test_the_curl_recipes_lead_to_settled_modes(service: Service, tmp_path: Path
     done = subprocess.run(
         ["bash", "-c", script],
         cwd=tmp_path,
-        env={**os.environ, "SLACKWATER_URL": service.url, "NO_PROXY": "127.0.0.1"},
+        env={
+            **os.environ,
+            "SLACKWATER_URL": service.url,
+            "NO_PROXY": "127.0.0.1",
+            "PATH": f"{Path(sys.executable).parent}:{os.environ['PATH']}",  # where the command slackwater is
+        },
         capture_output=True,
         text=True,
         timeout=60,
@@ -37,6 +43,10 @@ def test_the_curl_recipes_lead_to_settled_modes(service: Service, tmp_path: Path
     assert '"sequence":0' in done.stdout.replace(" ", "")
     assert "settled" in done.stdout
     assert "(2, 1, 500)" in done.stdout
+    assert (tmp_path / "STOP").exists()
+    assert (tmp_path / "rig" / "done" / "burst1.npy").exists()
+    assert "640 snapshots in all" in done.stdout
+    assert (tmp_path / "results.nc").read_bytes()[:3] == b"CDF"
 
 
 def _solver() -> Iterator[tuple[int, float, npt.NDArray[np.float64], npt.NDArray[np.float64]]]:

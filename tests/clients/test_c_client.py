@@ -399,3 +399,22 @@ def test_a_service_away_for_half_a_minute_loses_nothing(
         run = client.run(done.state["run"])
         assert check_stored(run, snapshots, 20) == 225
         check_holds_exactly(run, snapshots)
+
+
+@pytest.mark.campaign
+def test_a_service_killed_again_and_again_loses_nothing(
+    mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make, replay: Replays
+) -> None:
+    rng = np.random.default_rng(8)
+    snapshots = make_snapshots(3000)
+    started = replay.start(mortal_service.url, declaration, snapshots, batch=3, pause_ms=10)
+    for pause in rng.uniform(0.2, 2.0, size=6):
+        time.sleep(pause)
+        mortal_service.kill()
+        mortal_service.start()
+    done = started.result(timeout=250.0)
+    assert (done.code, done.state["sent"], done.state["lost"]) == (OK, 3000, 0)
+    with Client(mortal_service.url) as client:
+        run = client.run(done.state["run"])
+        assert check_stored(run, snapshots, 3) == 1000
+        check_holds_exactly(run, snapshots)

@@ -361,3 +361,28 @@ def test_a_change_starts_the_settling_time_anew() -> None:
     known = seen_again(known, [Sighting("a", 1, 5), Sighting("b", 2, 6)], now=11.0)
     assert (known["a"].since, known["b"].since) == (10.0, 11.0)
     assert seen_again(known, [], now=12.0) == {}
+
+
+def test_a_service_that_is_away_for_a_while_loses_and_doubles_nothing(
+    folder: Path, mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make
+) -> None:
+    snapshots, times = make_snapshots(80), 0.5 * np.arange(80)
+    with Client(mortal_service.url) as client:
+        run = client.declare(declaration)
+        current = Watch(folder, mortal_service, "--run", run.id, "--end-after-idle", "3")
+        current.start()
+        try:
+            for k in range(40):
+                write(folder / f"b{k}.npz", snapshots[2 * k : 2 * k + 2], times[2 * k : 2 * k + 2])
+                if k == 12:
+                    until(lambda: run.refresh()["n_snapshots"] > 0)
+                    mortal_service.kill()
+                if k == 30:
+                    mortal_service.start()
+                time.sleep(0.03)
+            assert current.wait(60.0) == 0, current.log
+        finally:
+            current.end()
+        assert names(folder) == ["done"]
+        np.testing.assert_array_equal(run.coefficients()[0], times)
+        np.testing.assert_allclose(run.mean().reshape(-1), snapshots.reshape(80, -1).mean(axis=0), rtol=1e-5)

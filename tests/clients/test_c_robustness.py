@@ -109,7 +109,7 @@ def talk(
     def with_turns(*turns: Turn, snapshots: npt.NDArray[Any] | None = None, **settings: float) -> Any:
         peers.append(ScriptedPeer(turns))
         posted = make_snapshots(16) if snapshots is None else snapshots
-        done = replay(peers[-1].url, declaration, posted, **{"batch": 8, "flush": 20, "idle": 1, **settings})
+        done = replay(peers[-1].url, declaration, posted, **{"batch": 8, "flush": 20, "idle": 2, **settings})
         return done, peers[-1]
 
     yield with_turns

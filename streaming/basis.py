@@ -74,7 +74,7 @@ class EvolvingBasis:
             rank = self._tall.rank
             straight = self.bend < STRAIGHT_BEND and self.n_blocks % STRAIGHT_BLOCKS != 0
             gram, probed = self._tall.project(n, straight)
-            step = self._turn(gram, n)
+            step = self._turn(gram, probed, n)
         energies = np.diag(gram)[rank:].copy()
         self.probes_basis = np.concatenate([self.probes_basis, probed.T], axis=1) @ step.transform.T
         self.values, self.bend = step.singular_values, step.bend
@@ -83,19 +83,28 @@ class EvolvingBasis:
         self.n_snapshots, self.n_blocks = self.n_snapshots + n, self.n_blocks + 1
         return Block(gram[rank:, :rank].copy(), step.coordinates, probed, energies, step.carried)
 
-    def _turn(self, gram: Array, n: int) -> Update:
+    def _turn(self, gram: Array, probed: Array, n: int) -> Update:
         """Decide the update from the cheap Gram matrix, or from a second look at the rows, and turn the basis."""
         rank, dtype = self._declaration.rank, self._declaration.dtype
         step = update_from_gram(self.values, gram, rank, dtype, GRAM_CONDITION[dtype])
         if step is not None:
-            self._tall.rotate(step.transform)
+            self._tall.rotate(step.transform, probed)
             return step
         if dtype == "float32":
             step = update_from_gram(self.values, self._tall.gram_in_double(n), rank, dtype, math.inf)
         step = step or update_from_factor(self.values, self._tall.factor(n), rank, dtype)
-        self._tall.rotate(step.transform)
+        self._tall.rotate(step.transform, probed)
         self._tall.orthonormalise()
         return step
+
+    def seen_covariance(self, mean_probed: Array) -> Array:
+        """Return the exact covariance of w with the coordinates U y, (p, r), whatever was dropped on the way.
+
+        ``mean_probed`` (p,) is the mean of w.
+        """
+        with one_blas_thread():
+            sketch, total = self._tall.sketch_products()
+        return sketch / self.n_snapshots - np.outer(mean_probed, total / self.n_snapshots)
 
     def fields(self, coefficients: Array) -> Float:
         """Return W^(-1/2) (coefficients U) as (n, n_fields, n_points), coefficients (n, r)."""

@@ -1,11 +1,11 @@
 """The error tree of the engine. Every message holds the offending values and what to do.
 
-    StreamError
-    ├── DeclarationError   the run cannot be set up as declared
-    ├── SnapshotError      a batch cannot be absorbed; the stream is unchanged
-    ├── NotReadyError      asked for a result before the first block was applied
-    ├── ClosedError        a batch after close
-    └── CheckpointError    a checkpoint is damaged, incomplete or of another version
+StreamError
+├── DeclarationError   the run cannot be set up as declared
+├── SnapshotError      a batch cannot be absorbed; the stream is unchanged
+├── NotReadyError      asked for a result before the first block was applied
+├── ClosedError        a batch after close
+└── CheckpointError    a checkpoint is damaged, incomplete or of another version
 """
 
 

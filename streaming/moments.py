@@ -29,6 +29,8 @@ class Moments:
     rank : R, number of leading entries of z that are basis coordinates
     probes_basis : (p, R) Omega U', the probes' view of the basis vectors
     mean_energy : |y_mean|^2 over the whole record (exact), for the total energy about the mean
+    unseen : (p, R) exact covariance of w with U y, less the one in these moments: what truncation has hidden from them,
+        or None when nothing can have been hidden
     """
 
     counts: Array
@@ -39,6 +41,7 @@ class Moments:
     rank: int
     probes_basis: Array
     mean_energy: float
+    unseen: Array | None = None
 
     @property
     def n_blocks(self) -> int:
@@ -66,7 +69,13 @@ class Moments:
             self.probes_basis,
             0.0,
         )
-        return Moments(**{**kept.__dict__, "mean_energy": kept.window_mean_energy()})
+        share = kept.n_snapshots / self.n_snapshots  # all that was hidden is laid to the blocks that are kept
+        unseen = None if self.unseen is None else self.unseen / share
+        return Moments(**{**kept.__dict__, "mean_energy": kept.window_mean_energy(), "unseen": unseen})
+
+    def with_unseen(self, unseen: Array) -> Moments:
+        """Return the same with what truncation has hidden, (p, R)."""
+        return Moments(**{**self.__dict__, "unseen": unseen})
 
     def whole_blocks(self) -> Moments:
         """Leave out a last block that holds less than half of the others, too short to compare with them."""
@@ -125,4 +134,5 @@ class Moments:
             self.rank,
             self.probes_basis,
             self.mean_energy,
+            self.unseen,
         )

@@ -225,9 +225,14 @@ class SnapshotStream:
 
     def moments(self) -> Moments:
         """Return the block moments that all statistics are computed from, in the current basis."""
+        self._check_ready()
+        moments = self._ledger.moments(self._basis.probes_basis, self._basis.mean_energy())
+        exact = self._basis.seen_covariance(moments.mean()[moments.rank :])
+        return moments.with_unseen(exact - moments.covariance()[moments.rank :, : moments.rank])
+
+    def _check_ready(self) -> None:
         if self.n_applied == 0:
             raise NotReadyError(f"no block applied yet: {self.n_waiting} of {self.declaration.length_of_block} are in")
-        return self._ledger.moments(self._basis.probes_basis, self._basis.mean_energy())
 
     def convergence(self) -> Convergence:
         """Return the numbers and the verdict at this moment."""
@@ -250,7 +255,7 @@ class SnapshotStream:
 
     def mean(self) -> Array:
         """Return the mean of all applied snapshots, (n_fields, n_points), exact whatever was truncated."""
-        self.moments()
+        self._check_ready()
         return self._basis.mean()
 
     def singular_values(self) -> Array:
@@ -276,7 +281,7 @@ class SnapshotStream:
         Energy outside the basis and its limit, squared Hotelling distance in the wanted modes and its limit; NaN
         where nothing was known yet.
         """
-        self.moments()
+        self._check_ready()
         return self._record.read_novelty()
 
     # -- state ------------------------------------------------------------------------------------------

@@ -1,8 +1,9 @@
 """The tall rows: the one object that holds arrays as long as a snapshot, and the only one that is mutable and big.
 
-Rows are cut into panels, (rows, width), each contiguous and small enough for the cache. A panel holds the p probes
-first, then the r basis rows and the snapshots of the open block, so that one product gives every inner product
-of the new snapshots that an update needs.
+Rows are cut into panels, (rows, width), each contiguous and small enough for the cache. A panel holds the sketch and
+the p probes first, then the r basis rows and the snapshots of the open block, so that one product gives every inner
+product of the new snapshots that an update needs. The sketch, p rows, is the sum of w y' over all snapshots: the
+exact covariance as the probes see it, whatever the basis has dropped.
 Panels are worked on side by side, each by one BLAS thread, and their small results are summed
 in panel order: results do not depend on the number of threads, bit for bit.
 
@@ -31,6 +32,7 @@ Result = TypeVar("Result")
 
 PANEL_BYTES = 2 * 1024**2  # of one panel; measured best on machines with 1 MiB of second-level cache per core
 MAX_THREADS = 32
+FIRST_ROW = 2 * N_PROBES  # of the basis in a panel; the sketch and the probes come before
 ORTHONORMAL_EPS = 50.0  # after an ill-conditioned update the basis is made orthonormal beyond this many eps
 
 
@@ -68,13 +70,13 @@ class TallRows:
         self.n_rows, self.dtype = n_rows, np.dtype(dtype)
         self.rank = 0
         self._has_datum = False
-        capacity = N_PROBES + max_rank + block_length
+        capacity = FIRST_ROW + max_rank + block_length
         width = max(256, PANEL_BYTES // (capacity * self.dtype.itemsize))
         self._n_panels = -(-n_rows // width)
         self._width = -(-n_rows // self._n_panels)
         shape = (self._n_panels, self._width)
         self._panels = np.zeros((self._n_panels, capacity, self._width), self.dtype)
-        self._panels[:, :N_PROBES] = self._to_panels(rademacher(n_rows, self.dtype))
+        self._panels[:, N_PROBES:FIRST_ROW] = self._to_panels(rademacher(n_rows, self.dtype))
         self._datum = np.zeros(shape, self.dtype)
         self._scale = self._to_panels(np.ones(n_rows) if root_weights is None else root_weights).astype(dtype)
         self._sum = np.zeros(shape)
@@ -89,7 +91,7 @@ class TallRows:
 
         def write(k: int) -> None:
             part = snapshots[:, self._columns(k)]
-            first = N_PROBES + self.rank + position
+            first = FIRST_ROW + self.rank + position
             rows = self._panels[k, first : first + len(part), : part.shape[1]]
             if self._has_datum:
                 np.subtract(part, self._datum[k, : part.shape[1]], out=rows, casting="same_kind")
@@ -140,9 +142,9 @@ class TallRows:
         ones = np.ones(n_snapshots, self.dtype)
 
         def products(k: int) -> tuple[Float, Float | None]:
-            basis, new = self._rows(k, r), self._panels[k, N_PROBES + r : N_PROBES + r + n_snapshots]
+            basis, new = self._rows(k, r), self._panels[k, FIRST_ROW + r : FIRST_ROW + r + n_snapshots]
             self._sum[k] += ones @ new
-            cross = new @ self._panels[k, : N_PROBES + r + n_snapshots].T
+            cross = new @ self._panels[k, N_PROBES : FIRST_ROW + r + n_snapshots].T
             return cross, None if straight else basis @ basis.T
 
         gram = np.zeros((r + n_snapshots, r + n_snapshots))
@@ -186,12 +188,18 @@ class TallRows:
             stacked = [_triangle(pair, n_all) for pair in pairs]
         return stacked[0].T
 
-    def rotate(self, transform: Array) -> None:
-        """Replace the basis by transform [U; Y], (q, K), in place; the open block becomes empty."""
+    def rotate(self, transform: Array, probed: Array | None = None) -> None:
+        """Replace the basis by transform [U; Y], (q, K), in place; the open block becomes empty.
+
+        With ``probed`` (n, p), what the probes saw of the open block, the block goes into the sketch first.
+        """
         small = transform.astype(self.dtype)
-        rank, n_all = small.shape
+        seen = None if probed is None else probed.T.astype(self.dtype)
+        rank, n_all, first = *small.shape, self.rank
 
         def apply(k: int) -> None:
+            if seen is not None:
+                self._panels[k, :N_PROBES] += seen @ self._rows(k, n_all)[first:]
             self._rows(k, rank)[...] = small @ self._rows(k, n_all)
 
         self._each(apply)
@@ -203,6 +211,19 @@ class TallRows:
         r = self.rank
         if np.abs(gram - np.eye(r)).max(initial=0.0) > ORTHONORMAL_EPS * float(np.finfo(self.dtype).eps):
             self.rotate(solve_triangular(np.linalg.cholesky(gram), np.eye(r), lower=True))
+
+    def sketch_products(self) -> tuple[Array, Array]:
+        """Return the sketch in basis coordinates, (p, r): sum of w (U y)'; and U times the running sum, (r,)."""
+
+        def product(k: int) -> tuple[Float, Array]:
+            basis = self._rows(k, self.rank)
+            return self._panels[k, :N_PROBES] @ basis.T, basis @ self._sum[k]
+
+        sketch, total = np.zeros((N_PROBES, self.rank)), np.zeros(self.rank)
+        for part, sums in self._each(product):
+            sketch += part
+            total += sums
+        return sketch, total
 
     # -- reading ------------------------------------------------------------------------------------------
 
@@ -235,12 +256,14 @@ class TallRows:
     # -- state ------------------------------------------------------------------------------------------
 
     def export(self, n_open: int) -> dict[str, Float]:
-        """Return the state of the rows: basis (r, m), waiting (n_open, m), datum, sum and scale (m,)."""
-        used = self._panels[:, N_PROBES : N_PROBES + self.rank + n_open].transpose(1, 0, 2)
+        """Return the state of the rows: basis (r, m), waiting (n_open, m), sketch (p, m), datum, sum and scale (m,)."""
+        used = self._panels[:, FIRST_ROW : FIRST_ROW + self.rank + n_open].transpose(1, 0, 2)
+        sketch = self._panels[:, :N_PROBES].transpose(1, 0, 2).reshape(N_PROBES, self._n_panels * self._width)
         rows = used.reshape(used.shape[0], self._n_panels * self._width)[:, : self.n_rows]
         return {
             "basis": rows[: self.rank],
             "waiting": rows[self.rank :],
+            "sketch": sketch[:, : self.n_rows],
             "datum": self._from_panels(self._datum),
             "sum": self._from_panels(self._sum),
             "scale": self._from_panels(self._scale),
@@ -250,7 +273,8 @@ class TallRows:
         """Take back what `export` gave, bit for bit."""
         self.rank = len(state["basis"])
         rows = np.concatenate([state["basis"], state["waiting"]])
-        self._panels[:, N_PROBES : N_PROBES + len(rows)] = self._to_panels(rows)
+        self._panels[:, FIRST_ROW : FIRST_ROW + len(rows)] = self._to_panels(rows)
+        self._panels[:, :N_PROBES] = self._to_panels(state["sketch"])
         self._datum[...], self._sum[...] = self._to_panels(state["datum"]), self._to_panels(state["sum"])
         self._scale = self._to_panels(state["scale"])
         self._has_datum = has_datum
@@ -259,7 +283,7 @@ class TallRows:
 
     def _rows(self, panel: int, n: int) -> Float:
         """The first n rows of [U; Y] in a panel, a view (n, width)."""
-        return self._panels[panel, N_PROBES : N_PROBES + n]
+        return self._panels[panel, FIRST_ROW : FIRST_ROW + n]
 
     def _columns(self, panel: int) -> slice:
         start = panel * self._width

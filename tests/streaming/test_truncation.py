@@ -36,12 +36,19 @@ def autoregressive(memory: float, decay: float) -> np.ndarray:
     return out
 
 
+def mirrored(snapshots: np.ndarray) -> np.ndarray:
+    """Each snapshot followed by its negative: every block, and so the datum, has the mean zero exactly."""
+    return np.stack([snapshots, -snapshots], axis=1).reshape(-1, snapshots.shape[1])
+
+
 @pytest.mark.parametrize(
     ("snapshots", "rank", "n_modes"),
     [
         pytest.param(travelling(0.05), 10, 4, id="pairs in weak noise"),
         pytest.param(travelling(0.2), 10, 4, id="pairs in noise"),
         pytest.param(travelling(0.5), 10, 4, id="pairs in strong noise"),
+        pytest.param(travelling(1.0), 10, 4, id="pairs near the noise floor"),
+        pytest.param(mirrored(autoregressive(0.0, 0.9)), 12, 2, id="datum at the mean"),
         pytest.param(autoregressive(0.0, 0.9), 12, 2, id="independent, slow decay"),
         pytest.param(autoregressive(0.99, 0.9), 12, 2, id="long memory"),
         pytest.param(autoregressive(0.9, 0.8), 12, 2, id="fast decay"),

@@ -1,7 +1,7 @@
 // Bound against tolerance over the length of the record, one line for each group of modes, both axes logarithmic, with
 // the forecast continued to the tolerance line.
 
-import { axis, colour, rem, SERIES } from "./chart.js";
+import { colour, logAxis, rem, SERIES } from "./chart.js";
 import { capital, count, degrees, digits, groupName, rough, worst } from "./words.js";
 
 const MAX_GROUPS = SERIES.length; // more lines than this cannot be told apart
@@ -68,25 +68,6 @@ function wholeRange(_, low, high) {
 
 function roomy(_, low, high) {
   return low === null ? [1, 90] : [low / 1.4, Math.min(180, high * 1.25)];
-}
-
-function logAxis(label, extra = {}) {
-  return axis(label, { ...extra, splits: (_, index, low, high) => marks(low, high), values: (_, ticks) => ticks.map(short),
-    filter: (_, ticks) => ticks });
-}
-
-// 1, 2, 5 of each decade are enough to read a logarithmic axis, and 1 alone over many decades; pure.
-export function marks(low, high) {
-  const leads = high / low > 2e3 ? [1] : high / low < 12 ? [1, 1.5, 2, 3, 4, 5, 7] : [1, 2, 5];
-  const found = [];
-  for (let decade = Math.floor(Math.log10(low)); decade <= Math.log10(high); decade += 1) {
-    found.push(...leads.map((lead) => Number(`${lead}e${decade}`)).filter((mark) => mark >= low && mark <= high));
-  }
-  return found;
-}
-
-function short(value) {
-  return value >= 1e6 ? `${digits(value / 1e6)}M` : value >= 1e4 ? `${digits(value / 1e3)}k` : digits(value);
 }
 
 function drawForecast(plot, forecast) {

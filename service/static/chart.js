@@ -3,6 +3,7 @@
 
 import uPlot from "./vendor/uPlot.esm.js";
 import { h } from "./elements.js";
+import { digits } from "./words.js";
 
 export function colour(name) {
   return getComputedStyle(document.documentElement).getPropertyValue(`--${name}`).trim();
@@ -19,6 +20,26 @@ export function axis(label, extra = {}) {
   const font = `${Math.round(0.8 * size)}px system-ui, sans-serif`;
   return { label, font, labelFont: font, labelSize: 1.6 * size, size: 3 * size, gap: 0.3 * size, stroke: () => colour("ink"),
     grid: { stroke: () => colour("rule"), width: 1 }, ticks: { stroke: () => colour("rule"), width: 1 }, ...extra };
+}
+
+export function logAxis(label, extra = {}) {
+  return axis(label, { ...extra, splits: (_, index, low, high) => marks(low, high), values: (_, ticks) => ticks.map(short),
+    filter: (_, ticks) => ticks });
+}
+
+// 1, 2, 5 of each decade are enough to read a logarithmic axis, and 1 alone over many decades; pure.
+export function marks(low, high) {
+  const leads = high / low > 2e3 ? [1] : high / low < 12 ? [1, 1.5, 2, 3, 4, 5, 7] : [1, 2, 5];
+  const found = [];
+  for (let decade = Math.floor(Math.log10(low)); decade <= Math.log10(high); decade += 1) {
+    found.push(...leads.map((lead) => Number(`${lead}e${decade}`)).filter((mark) => mark >= low && mark <= high));
+  }
+  return found;
+}
+
+function short(value) {
+  if (value < 1e-3) return value.toExponential(0);
+  return value >= 1e6 ? `${digits(value / 1e6)}M` : value >= 1e4 ? `${digits(value / 1e3)}k` : digits(value);
 }
 
 // A chart that is made once and then given new data; `options(width)` is asked anew when series or colours change.

@@ -1,10 +1,11 @@
 // Intake health, and what is strange now: rate, queue, missing batches, repeats, drift.
 
 import { h } from "./elements.js";
-import { bytes, capital, count, digits, meaning } from "./words.js";
+import { bytes, capital, count, digits, meaning, percent } from "./words.js";
 
 const RATE_SECONDS = 20; // long enough to smooth batches, short enough to see a solver stop
 const QUIET_SECONDS = 60;
+const [NEWEST, MUCH_NEW] = [100, 0.05]; // snapshots looked at, and the share of them that is worth a word
 
 // Snapshots in the last seconds, from counters read now and then.
 export class Rate {
@@ -47,7 +48,7 @@ function blockOf({ block_length: length, retained_rank: rank, n_points: n, field
 }
 
 // Sentences about what needs a look; empty when nothing does. Pure.
-export function strange(run, report, quietSeconds) {
+export function strange(run, report, quietSeconds, novelty = null) {
   const still = report.stationarity;
   const found = [];
   if (run.status === "failed") found.push(`${capital(meaning(run))}.`);
@@ -55,10 +56,23 @@ export function strange(run, report, quietSeconds) {
   if (run.status === "open" && run.n_snapshots > 0 && quietSeconds > QUIET_SECONDS) {
     found.push(`No new snapshot for ${Math.floor(quietSeconds / 60)} min.`);
   }
+  const beyond = novelty ? recentlyBeyond(novelty) : 0;
+  if (beyond > MUCH_NEW) {
+    found.push(`${percent(beyond)} of the newest snapshots up to ${count(novelty.n_snapshots)} are beyond what was known.`);
+  }
   if (still.drifting) found.push(`The record drifts (p = ${digits(still.drift_p_value, 2)}).`);
   if (still.startup_in_doubt) found.push("No end of the start-up has been found.");
   if (still.repeated_snapshots > 0) found.push(`${count(still.repeated_snapshots)} snapshots repeat the one before.`);
   return found;
+}
+
+// Share of the newest snapshots that exceed a limit.
+function recentlyBeyond({ outside, outside_limit: first, hotelling, hotelling_limit: second }) {
+  const from = Math.max(0, outside.length - NEWEST);
+  const over = (value, limit) => value !== null && limit !== null && value > limit;
+  let n = 0;
+  for (let k = from; k < outside.length; k += 1) n += over(outside[k], first[k]) || over(hotelling[k], second[k]) ? 1 : 0;
+  return outside.length ? n / (outside.length - from) : 0;
 }
 
 export function strangeList(sentences) {

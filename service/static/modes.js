@@ -73,7 +73,7 @@ export class ModesSection {
     say(this.#where, `${count(checkpoint.n_snapshots)} snapshots${newest ? " (newest)" : ""}`);
     this.#slider.setAttribute("aria-valuetext", this.#where.textContent);
     const then = reports.filter((one) => one.n_snapshots <= checkpoint.n_snapshots && one.groups.length);
-    this.chosen(newest ? reports[reports.length - 1] : then[then.length - 1]);
+    this.chosen(newest ? reports[reports.length - 1] : then[then.length - 1], checkpoint.n_snapshots);
     const groups = this.#wanted(run, then[then.length - 1]);
     const key = JSON.stringify([checkpoint.n_snapshots, groups.map((group) => [group.modes, group.travelling])]);
     if (key === this.#shown) return;

@@ -5,6 +5,7 @@ import { energyTable } from "./energies.js";
 import { h, say, table, wide } from "./elements.js";
 import { intakeList, Rate, recordList, strange, strangeList } from "./health.js";
 import { ModesSection } from "./modes.js";
+import { SignalsSection } from "./signals.js";
 import { VerdictPanel } from "./verdict.js";
 import { answer, capital, degrees, groupName, percent } from "./words.js";
 
@@ -19,6 +20,8 @@ export class RunView {
   #parts = {};
   #facts = { run: null, report: null, reports: [], checkpoints: [] };
   #again = 0;
+  #checkpoint = null;
+  #novelty = null;
   #busy = false;
   #missed = false;
 
@@ -26,7 +29,8 @@ export class RunView {
     [this.line, this.id] = [line, id];
     this.path = `/v1/runs/${encodeURIComponent(id)}`;
     this.events = `${this.path}/events`;
-    this.modes = new ModesSection(line, this.path, (report) => this.#showEnergies(report));
+    this.modes = new ModesSection(line, this.path, (report, n) => this.#chosen(report, n));
+    this.signals = new SignalsSection(line, this.path);
     const part = (name, title) => {
       this.#parts[name] = h("div");
       return h("section", { class: name }, h("h2", {}, title), this.#parts[name]);
@@ -35,7 +39,8 @@ export class RunView {
       h("div", { class: "columns" }, this.#bound.root,
         h("div", { class: "aside" }, part("strange", "Strange now"), part("intake", "Intake"),
           part("record", "Record"))),
-      h("div", { class: "columns even" }, part("groups", "Groups of modes"), part("energies", "Energies")), this.modes.root, part("take", "Take away"));
+      h("div", { class: "columns even" }, part("groups", "Groups of modes"), part("energies", "Energies")), this.modes.root, this.signals.root,
+      part("take", "Take away"));
   }
 
   trail() { return [h("a", { href: "#/" }, "All runs")]; }
@@ -44,11 +49,13 @@ export class RunView {
     clearTimeout(this.#again);
     this.#bound.end();
     this.modes.end();
+    this.signals.end();
   }
 
   recolour() {
     this.#bound.recolour();
     this.modes.recolour();
+    this.signals.recolour();
   }
 
   news({ name }) {
@@ -102,13 +109,21 @@ export class RunView {
     document.title = `${answer(run)} · ${declaration.name}`;
     this.#bound.show(run, [...reports, report]);
     const quiet = this.#rate.quietSeconds(performance.now() / 1000);
-    this.#fill("strange", strangeList(strange(run, report, quiet)));
+    this.#fill("strange", strangeList(strange(run, report, quiet, this.#novelty)));
     this.#fill("intake", intakeList(run, this.#rate));
     this.#fill("record", recordList(run, report));
     this.#fill("groups", groupTable(report, declaration.criterion));
     if (!checkpoints.length) this.#showEnergies(report);
     this.#fill("take", downloads(this.path, checkpoints));
     this.modes.show(run, reports, report, checkpoints);
+  }
+
+  // The checkpoint under the slider, and the evaluation that was newest then.
+  #chosen(report, checkpoint) {
+    this.#showEnergies(report);
+    if (checkpoint === this.#checkpoint) return;
+    this.#checkpoint = checkpoint;
+    this.signals.read(this.#facts.run.declaration, checkpoint, (found) => { this.#novelty = found; });
   }
 
   #showEnergies(report) {

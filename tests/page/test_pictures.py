@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from typing import Any
 
@@ -76,6 +77,13 @@ def test_a_pair_has_its_portrait(watch: Callable[..., Watched], service: Running
     page = watch(service.url).open(f"/runs/{run}")
     page.locator(".chart.portrait canvas").wait_for()
     page.locator(".pair", has_text="travelling").wait_for()
+    peak = service.client.get(f"/v1/runs/{run}/convergence").json()["modes"][1]["strouhal"]
+    page.locator(".spectrapart .chart canvas").wait_for()
+    words = page.locator(".spectrapart .note").inner_text()
+    shown = float(re.search(r"mode 2 at ([0-9.]+)", words).group(1))
+    width = float(re.search(r"closer than ([0-9.]+)", words).group(1))
+    assert abs(shown - peak) <= width
+    page.locator(".noveltypart .note", has_text="lie beyond a limit").wait_for()
     page.get_by_role("button", name="Show the pair in motion").click()
     moving = page.get_by_label("The pair in motion")
     moving.wait_for()

@@ -76,7 +76,7 @@ def test_what_is_strange_is_said(page: Any) -> None:
 
 def test_marks_of_a_logarithmic_axis(page: Any) -> None:
     limits = [[14.8, 1400.0], [7.0, 40.0], [3e2, 4e7]]
-    found = page.evaluate("(ls) => import('/page/bounds.js').then(({ marks }) => ls.map((l) => marks(...l)))", limits)
+    found = page.evaluate("(ls) => import('/page/chart.js').then(({ marks }) => ls.map((l) => marks(...l)))", limits)
     assert found[0] == [20, 50, 100, 200, 500, 1000]
     assert found[2] == [1e3, 1e4, 1e5, 1e6, 1e7]
     for (low, high), ticks in zip(limits, found, strict=True):

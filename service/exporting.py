@@ -30,11 +30,13 @@ class Place:
     ----------
     axes : along x, y, z, for a grid; an axis that the grid has not holds one zero
     positions : (n_points, 3) for scattered points
+    triangles : (n, 3) numbers of points that form a surface, where they were given
     """
 
     declaration: RunDeclaration
     axes: tuple[Array, Array, Array] | None
     positions: Array | None
+    triangles: npt.NDArray[np.int64] | None = None
 
     @property
     def suffix(self) -> str:
@@ -68,7 +70,8 @@ def place_of(service: Service, run_id: str, declaration: RunDeclaration) -> Plac
         )
     padded = np.zeros((len(positions), 3))
     padded[:, : positions.shape[1]] = positions
-    return Place(declaration, None, padded)
+    triangles = load_array(service.folders.run(run_id).array("triangles"))
+    return Place(declaration, None, padded, None if triangles is None else triangles.astype(np.int64))
 
 
 def mode_scalars(source: Source, modes: range) -> list[Scalar]:

@@ -29,7 +29,7 @@ class RunFolder:
         return self.path / "coefficients.record"
 
     def array(self, name: str) -> Path:
-        """``weights`` or ``positions``, as an NPY file."""
+        """``weights``, ``positions`` or ``triangles``, as an NPY file."""
         return self.path / f"{name}.npy"
 
     def batch(self, sequence: int) -> Path:

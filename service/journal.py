@@ -69,7 +69,7 @@ class Draft:
             length = header_length(self._rest)
             if length is None or len(self._rest) < length:
                 return
-            header = parse_header(self._rest[:length])
+            header = parse_header(self._rest[:length], self._expected.types)
         except NpyError as error:
             raise Problem("invalid-array", f"{error}") from error
         self._expected.check(header)

@@ -21,7 +21,7 @@ logger = logging.getLogger("slackwater")
 OPEN_PATHS = frozenset({"/livez", "/readyz", "/"})
 OPEN_FOLDER = "/page/"
 # Bodies that are streamed and bounded by their handler.
-_ARRAY_ENDINGS = ("/batches", "/weights", "/positions")
+_ARRAY_ENDINGS = ("/batches", "/weights", "/positions", "/triangles")
 
 
 class Guard:

@@ -19,6 +19,7 @@ MAGIC = b"\x93NUMPY"
 MAX_HEADER_BYTES = 4096
 MAX_AXES = 8
 FLOAT_TYPES = ("<f4", ">f4", "<f8", ">f8")
+WHOLE_TYPES = ("<i4", ">i4", "<i8", ">i8")  # for numbers of points, never for snapshots
 # A literal dictionary needs no other characters; refusing the rest keeps the parser's input harmless.
 _HARMLESS = re.compile(r"^[\w\s'\"{}()\[\]:,.<>=|+-]*$", re.ASCII)
 _LENGTH_BYTES = {1: 2, 2: 4, 3: 4}
@@ -65,15 +66,15 @@ def header_length(start: bytes) -> int | None:
     return length
 
 
-def parse_header(header: bytes) -> ArrayHeader:
-    """Read a whole header, as long as `header_length` said. Raises NpyError."""
+def parse_header(header: bytes, types: tuple[str, ...] = FLOAT_TYPES) -> ArrayHeader:
+    """Read a whole header, as long as `header_length` said, of an array of one of ``types``. Raises NpyError."""
     fixed = 8 + _LENGTH_BYTES[header[6]]
     members = _parse_literal(header[fixed:])
     if members.keys() != {"descr", "fortran_order", "shape"}:
         raise NpyError(f"the NPY header must hold descr, fortran_order and shape, it holds {sorted(members)}")
     if members["fortran_order"] is not False:
         raise NpyError("the array is in Fortran order; send numpy.ascontiguousarray(array)")
-    return ArrayHeader(_parse_type(members["descr"]), _parse_shape(members["shape"]), len(header))
+    return ArrayHeader(_parse_type(members["descr"], types), _parse_shape(members["shape"]), len(header))
 
 
 def _parse_literal(text: bytes) -> dict[str, Any]:
@@ -89,12 +90,11 @@ def _parse_literal(text: bytes) -> dict[str, Any]:
     return value
 
 
-def _parse_type(descr: object) -> np.dtype[Any]:
-    if descr not in FLOAT_TYPES or not isinstance(descr, str):
+def _parse_type(descr: object, types: tuple[str, ...]) -> np.dtype[Any]:
+    if descr not in types or not isinstance(descr, str):
         hint = "pickled objects are never read; " if isinstance(descr, str) and "O" in descr else ""
         raise NpyError(
-            f"the array is of type {_shown(descr)}; {hint}send one of {', '.join(FLOAT_TYPES)} "
-            "(array.astype('float32'))"
+            f"the array is of type {_shown(descr)}; {hint}send one of {', '.join(types)} (array.astype('float32'))"
         )
     return np.dtype(descr)
 

@@ -22,7 +22,7 @@ from service.intake import Body, check_capacity, check_headers, received
 from service.problems import Problem
 from service.records import RunRecord, one
 from service.registry import add_event, find_run
-from service.shapes import Expected, expect_positions, expect_weights
+from service.shapes import Expected, expect_positions, expect_triangles, expect_weights, parse_triangles
 from service.translation import from_validation
 from service.waits import preferred_wait_seconds, wait_until
 from streaming.declaration import RunDeclaration
@@ -177,6 +177,18 @@ async def put_positions(run_id: str, request: Request, service: ServiceOf) -> No
     await _put_array("positions", run, expect_positions(run.declaration), request, service)
 
 
+@router.put(
+    "/{run_id}/triangles",
+    status_code=204,
+    openapi_extra=npy_body("triangles over scattered points: (n_triangles, 3), numbers of points from 0, whole"),
+    responses=refusals(400, 404, 409, 411, 413, 415, 422, 503, 507),
+)
+async def put_triangles(run_id: str, request: Request, service: ServiceOf) -> None:
+    """How scattered points are joined to a surface, before the first batch; exports carry it on."""
+    run = await asyncio.to_thread(service.reader.run, run_id)
+    await _put_array("triangles", run, expect_triangles(run.declaration), request, service)
+
+
 async def _put_array(name: str, run: RunRecord, expected: Expected, request: Request, service: Service) -> None:
     n_bytes = check_headers(request, service.settings.max_body_bytes)
     _check_unstarted(run, name, service.reader.backlog(run.id).n_batches)
@@ -194,6 +206,8 @@ def _check_array(name: str, body: Body, declaration: RunDeclaration) -> None:
     try:
         if name == "weights":
             parse_weights(declaration, values)
+        elif name == "triangles":
+            parse_triangles(declaration, values)
         else:
             parse_positions(declaration, values)
     except DeclarationError as error:

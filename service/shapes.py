@@ -7,8 +7,9 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 
-from service.npy import ArrayHeader
+from service.npy import FLOAT_TYPES, WHOLE_TYPES, ArrayHeader
 from service.problems import Problem
 from streaming.declaration import RunDeclaration
 from streaming.intake import accepted_shapes
@@ -25,6 +26,7 @@ class Expected:
     dtype: np.dtype[Any]
     check: Callable[[ArrayHeader], None]
     place: Callable[[ArrayHeader, int], dict[str, Any]]
+    types: tuple[str, ...] = FLOAT_TYPES
 
 
 def expect_batch(declaration: RunDeclaration, max_snapshots: int) -> Expected:
@@ -56,6 +58,34 @@ def expect_positions(declaration: RunDeclaration) -> Expected:
         )
     wanted = [(declaration.n_points, axes) for axes in (1, 2, 3)]
     return Expected("positions", np.dtype(np.float64), _one_of("positions", wanted), _index)
+
+
+def expect_triangles(declaration: RunDeclaration) -> Expected:
+    """Three point numbers for each triangle of scattered points."""
+    if declaration.grid.kind != "points":
+        raise Problem(
+            "wrong-shape",
+            f"triangles belong to a run whose grid is of kind points, this one is {declaration.grid.kind}",
+        )
+
+    def check(header: ArrayHeader) -> None:
+        if len(header.shape) != 2 or header.shape[1] != 3 or header.shape[0] < 1:
+            raise Problem("wrong-shape", f"triangles have shape {list(header.shape)}; send [n_triangles, 3]")
+
+    return Expected("triangles", np.dtype(np.float64), check, _index, WHOLE_TYPES + FLOAT_TYPES)
+
+
+def parse_triangles(declaration: RunDeclaration, triangles: npt.NDArray[Any]) -> npt.NDArray[np.int64]:
+    """Point numbers (n, 3), counted from 0. Raises the 422 problem."""
+    whole: npt.NDArray[np.int64] = triangles.astype(np.int64)
+    bad = (whole != triangles) | (whole < 0) | (whole >= declaration.n_points)
+    if bad.any():
+        k = int(np.flatnonzero(bad.any(axis=1))[0])
+        raise Problem(
+            "wrong-values",
+            f"triangle {k} is {triangles[k].tolist()}; points count from 0 to {declaration.n_points - 1}",
+        )
+    return whole
 
 
 def _check_batch(header: ArrayHeader, declaration: RunDeclaration, max_snapshots: int) -> None:

@@ -101,9 +101,11 @@ def _geometry(place: Place) -> list[_Stored]:
             return []
         return [_fixed(name, axis) for name, axis in zip("xyz", place.axes, strict=True)]
     assert place.positions is not None
-    n = len(place.positions)
-    numbers = np.arange(n, dtype=np.int64)
-    return [_fixed("position", place.positions, 3), _fixed("connectivity", numbers), _fixed("offsets", numbers + 1)]
+    cells = place.triangles
+    if cells is None:
+        cells = np.arange(len(place.positions), dtype=np.int64)[:, np.newaxis]
+    ends = np.arange(1, len(cells) + 1, dtype=np.int64) * cells.shape[1]
+    return [_fixed("position", place.positions, 3), _fixed("connectivity", cells), _fixed("offsets", ends)]
 
 
 def _fixed(name: str, values: npt.NDArray[Any], n_components: int = 1) -> _Stored:
@@ -138,7 +140,11 @@ def _piece(place: Place) -> str:
     if place.axes is not None:
         return f'Extent="{_ends(place)}"'
     n = place.declaration.n_points
-    return f'NumberOfPoints="{n}" NumberOfVerts="{n}" NumberOfLines="0" NumberOfStrips="0" NumberOfPolys="0"'
+    vertices, polygons = (n, 0) if place.triangles is None else (0, len(place.triangles))
+    return (
+        f'NumberOfPoints="{n}" NumberOfVerts="{vertices}" NumberOfLines="0" NumberOfStrips="0" '
+        f'NumberOfPolys="{polygons}"'
+    )
 
 
 def _shape(place: Place, tags: list[str]) -> str:
@@ -146,7 +152,8 @@ def _shape(place: Place, tags: list[str]) -> str:
         return ""
     if place.axes is not None:
         return "<Coordinates>\n" + "\n".join(tags) + "\n</Coordinates>\n"
-    return f"<Points>\n{tags[0]}\n</Points>\n<Verts>\n{tags[1]}\n{tags[2]}\n</Verts>\n"
+    cells = "Verts" if place.triangles is None else "Polys"
+    return f"<Points>\n{tags[0]}\n</Points>\n<{cells}>\n{tags[1]}\n{tags[2]}\n</{cells}>\n"
 
 
 def collection(files: Sequence[tuple[float, str]]) -> str:

@@ -37,7 +37,7 @@ def test_every_body_is_described(service: RunningService) -> None:
         for method, operation in operations.items():
             takes_body = method in ("put", "patch") or (method == "post" and not path.endswith("/close"))
             assert ("requestBody" in operation) == takes_body, (method, path)
-            if path.endswith(("/batches", "/batches/{sequence}", "/weights", "/positions")):
+            if path.endswith(("/batches", "/batches/{sequence}", "/weights", "/positions", "/triangles")):
                 assert "application/x-npy" in operation["requestBody"]["content"]
 
 

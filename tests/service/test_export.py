@@ -13,7 +13,7 @@ import numpy.typing as npt
 import pytest
 
 from slackwater_client import Client
-from tests.service.serving import RunningService, check_problem, snapshots
+from tests.service.serving import NPY, RunningService, check_problem, npy, snapshots
 
 pytestmark = pytest.mark.timeout(60)  # a hang is a failure, and shows its stacks
 
@@ -109,6 +109,31 @@ def test_vtk_opens_modes_mean_and_reconstruction(
 def test_points_are_drawn_as_vertices(service: RunningService, runs: dict[str, str], tmp_path: Path) -> None:
     data = opened(fetch(service, f"/v1/runs/{runs['vtp']}/mean.vtp", tmp_path))
     assert data.GetNumberOfVerts() == 48
+
+
+def test_triangles_make_a_surface(service: RunningService, tmp_path: Path) -> None:
+    run = service.declare(grid={"kind": "points"})
+    triangles = np.array([[0, 1, 2], [1, 2, 47], [5, 4, 3]])
+    path = f"/v1/runs/{run}/triangles"
+    for wrong, kind in (
+        (triangles + 1, "wrong-values"),
+        (triangles - 1, "wrong-values"),
+        (triangles + 0.5, "wrong-values"),
+        (triangles[:, :2], "wrong-shape"),
+        (triangles.astype(complex), "invalid-array"),
+    ):
+        check_problem(service.client.put(path, content=npy(wrong), headers=NPY), 422, kind)
+    with Client(service.url) as client:
+        client.run(run).put_positions(POSITIONS)
+        client.run(run).put_triangles(triangles)
+    assert service.client.put(path, content=npy(triangles.astype(np.int32)), headers=NPY).status_code == 204
+    service.put(run, 0, snapshots(0, N))
+    service.client.post(f"/v1/runs/{run}/close")
+    data = opened(fetch(service, f"/v1/runs/{run}/mean.vtp", tmp_path))
+    assert (data.GetNumberOfVerts(), data.GetNumberOfPolys()) == (0, 3)
+    corners = [[data.GetCell(k).GetPointId(corner) for corner in range(3)] for k in range(3)]
+    assert corners == triangles.tolist()
+    check_problem(service.client.put(path, content=npy(triangles), headers=NPY), 409, "run-closed")
 
 
 def test_what_cannot_be_exported_says_what_can(service: RunningService, runs: dict[str, str]) -> None:

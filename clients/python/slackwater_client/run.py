@@ -88,6 +88,10 @@ class Run:
         """Give the positions of the points, shape (n_points, 2 or 3), a length, before the first batch."""
         self._transport.send_array("PUT", f"{self._path}/positions", NpyBody(positions))
 
+    def put_triangles(self, triangles: npt.ArrayLike) -> None:
+        """Join scattered points to a surface, (n_triangles, 3), point numbers from 0, before the first batch."""
+        self._transport.send_array("PUT", f"{self._path}/triangles", NpyBody(triangles))
+
     def post(
         self,
         snapshots: npt.ArrayLike,

@@ -16,9 +16,8 @@ from service.records import BatchRecord
 from service.registry import Registry
 from service.settings import Settings
 from service.shelf import Shelf
-from streaming.declaration import RunDeclaration
+from streaming.basis import memory_needed_bytes
 from streaming.errors import NotReadyError
-from streaming.probes import N_PROBES
 from streaming.report import Convergence, State
 from streaming.stream import SnapshotStream
 
@@ -37,12 +36,6 @@ class Place:
     board: Board
     leases: Leases
     poison: Poison
-
-
-def memory_needed_bytes(declaration: RunDeclaration) -> int:
-    """Memory of a run that is being applied: basis, open block and probes, in its dtype."""
-    rows = declaration.rank + declaration.length_of_block + N_PROBES
-    return rows * declaration.n_rows * declaration.real_dtype.itemsize
 
 
 class Applier:

@@ -11,7 +11,7 @@ import numpy.typing as npt
 
 from streaming.declaration import RunDeclaration
 from streaming.probes import N_PROBES
-from streaming.tall import TallRows, one_blas_thread
+from streaming.tall import FIRST_ROW, TallRows, one_blas_thread
 from streaming.update import GRAM_CONDITION, Update, update_from_factor, update_from_gram
 
 Float = npt.NDArray[np.floating]
@@ -42,6 +42,13 @@ class Block:
     probed: Array
     energies: Array
     carried: Array
+
+
+def memory_needed_bytes(declaration: RunDeclaration) -> int:
+    """Memory of the tall rows of a run: (R + L + 2 p) m in its dtype, and datum, scale, last snapshot and sum."""
+    d = declaration
+    rows = d.rank + d.length_of_block + FIRST_ROW + 3
+    return d.n_rows * (rows * d.real_dtype.itemsize + 8)
 
 
 class EvolvingBasis:

@@ -18,6 +18,7 @@ export class RunView {
   #name = h("h1", {}, "…");
   #labels = h("p", { class: "labels" });
   #parts = {};
+  #shown = new Map();
   #facts = { run: null, report: null, reports: [], checkpoints: [] };
   #again = 0;
   #checkpoint = null;
@@ -114,7 +115,7 @@ export class RunView {
     this.#fill("record", recordList(run, report));
     this.#fill("groups", groupTable(report, declaration.criterion));
     if (!checkpoints.length) this.#showEnergies(report);
-    this.#fill("take", downloads(this.path, checkpoints));
+    this.#fill("take", downloads(this.path, checkpoints, declaration.grid));
     this.modes.show(run, reports, report, checkpoints);
   }
 
@@ -145,8 +146,8 @@ export class RunView {
   #fill(name, element) {
     const place = this.#parts[name];
     const key = element.outerHTML;
-    if (place.dataset.key === key) return;
-    place.dataset.key = key;
+    if (this.#shown.get(name) === key) return;
+    this.#shown.set(name, key);
     place.replaceChildren(element);
   }
 }
@@ -160,13 +161,19 @@ function groupTable(report, criterion) {
   return wide(caption, table(caption, ["Modes", "Settled", "Bound", "Expected", "Truncation", "Energy"], rows, "numbers"));
 }
 
-function downloads(path, checkpoints) {
-  const links = [["Verdict and numbers (JSON)", `${path}/convergence`], ["All evaluations (JSON)",
-    `${path}/convergence/history`]];
-  if (checkpoints.length) {
-    links.push(["Checkpoint (zipped zarr)", checkpoints[0].archive], ["Modes (NPY)", `${path}/modes`],
-      ["Mean (NPY)", `${path}/mean`], ["Mean (PNG)", `${path}/mean.png`], ["Coefficients (NPY)", `${path}/coefficients`], ["Times (NPY)", `${path}/times`],
-      ["Singular values (NPY)", `${path}/singular-values`]);
-  }
+function downloads(path, checkpoints, grid) {
+  const links = [["Verdict and numbers (JSON)", "/convergence"], ["All evaluations (JSON)", "/convergence/history"],
+    ...(checkpoints.length ? FILES : [])].map(([text, end]) => [text, path + end]);
+  if (checkpoints.length) links.push(["Checkpoint (zipped zarr)", checkpoints[0].archive], ...vtkLinks(path, grid));
   return h("ul", { class: "downloads" }, links.map(([text, href]) => h("li", {}, h("a", { href, download: "" }, text))));
+}
+
+const FILES = [["Results (NetCDF)", "/results.nc"], ["Modes (NPY)", "/modes"], ["Mean (NPY)", "/mean"],
+  ["Mean (PNG)", "/mean.png"], ["Coefficients (NPY)", "/coefficients"], ["Coefficients (CSV)", "/coefficients.csv"],
+  ["Times (NPY)", "/times"], ["Singular values (CSV)", "/singular-values.csv"]];
+
+// the kind of VTK file depends on the grid; points without positions have none
+function vtkLinks(path, { kind }) {
+  const suffix = { uniform: "vti", rectilinear: "vtr", points: "vtp" }[kind];
+  return suffix ? [["Modes (VTK)", `${path}/modes.${suffix}`], ["Mean (VTK)", `${path}/mean.${suffix}`]] : [];
 }

@@ -31,6 +31,8 @@ def test_the_verdict_turns_settled_live(watch: Callable[..., Watched], service: 
     assert "a person stops the machine" in page.locator(".verdict .caution").inner_text()
     assert page.locator("section.groups tbody tr td:nth-child(2)").all_inner_texts() == ["yes", "yes", "yes"]
     assert service.client.get(f"/v1/runs/{run}").json()["verdict"] == "settled"
+    for link in page.locator(".downloads a").all():
+        assert service.client.get(link.get_attribute("href")).status_code == 200, link.inner_text()
 
 
 def test_a_restart_leaves_no_double_points(watch: Callable[..., Watched], tmp_path: Path) -> None:

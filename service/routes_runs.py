@@ -14,7 +14,6 @@ from pydantic import ValidationError
 
 from service.access import ServiceOf
 from service.answers import RunChange, RunList, RunResource, run_resource
-from service.applier import memory_needed_bytes
 from service.bodies import npy_body, refusals
 from service.commit import check_open
 from service.core import Service
@@ -25,6 +24,7 @@ from service.registry import add_event, find_run
 from service.shapes import Expected, expect_positions, expect_triangles, expect_weights, parse_triangles
 from service.translation import from_validation
 from service.waits import preferred_wait_seconds, wait_until
+from streaming.basis import memory_needed_bytes
 from streaming.declaration import RunDeclaration
 from streaming.errors import DeclarationError
 from streaming.intake import parse_positions, parse_weights

@@ -10,9 +10,10 @@ import errno
 import logging
 import threading
 
-from service.applier import Applier, Place, memory_needed_bytes
+from service.applier import Applier, Place
 from service.journal import JournalError
 from service.problems import Problem
+from streaming.basis import memory_needed_bytes
 from streaming.errors import StreamError
 
 logger = logging.getLogger("slackwater")

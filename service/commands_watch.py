@@ -133,7 +133,7 @@ def _watch(
                 touch = None  # once is enough
             if ended():
                 break
-            if end_after_idle is not None and time.monotonic() - watcher.last_news > end_after_idle:
+            if end_after_idle is not None and watcher.idle_seconds > end_after_idle:
                 if watcher.run is not None:
                     watcher.run.close()
                 break

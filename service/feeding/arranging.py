@@ -64,8 +64,14 @@ def time_variable(file: DataFile, choice: Choice) -> Variable | None:
         return None
     if choice.time is not None:
         return file.variable(choice.time)
-    found = (file.variables.get(name) for name in TIME_NAMES)
-    return next((one for one in found if one is not None and len(one.shape) <= 1 and one.is_real), None)
+    named = (file.variables.get(name) for name in TIME_NAMES)
+    found = next((one for one in named if one is not None and len(one.shape) <= 1), None)
+    if found is not None and not found.is_real:
+        raise FeedError(
+            f"{file.path}: {found.name} is of type {found.dtype}; write times as numbers in one unit, or leave "
+            "them aside with --without-times"
+        )
+    return found
 
 
 def variables_of_fields(file: DataFile, choice: Choice, fields: list[str], times: Variable | None) -> list[Variable]:

@@ -14,7 +14,7 @@ from service.feeding.folder import DONE, MARK, REFUSED, Order, Seen, Sighting, i
 from service.feeding.posted_list import Entry, PostedList
 from service.feeding.series import Piece, Series, plan
 from service.feeding.variables import FeedError
-from slackwater_client import InvalidError, Receipt, Run
+from slackwater_client import ConflictError, InvalidError, Receipt, Run
 from streaming.declaration import RunDeclaration
 
 Tell = Callable[[str], None]
@@ -57,7 +57,8 @@ class Watcher:
         self.list = PostedList(folder)
         self._known: dict[str, Seen] = {}
         self.receipt: Receipt | None = None
-        self.last_news = time.monotonic()
+        self._in_sight = True
+        self._last_news = time.monotonic()
         self.list.tidy(lambda one: not (folder / one.name).exists())
 
     def resume(self, run_of: Callable[[str], Run]) -> None:
@@ -69,23 +70,36 @@ class Watcher:
     def may_stop(self) -> bool:
         return self.receipt is not None and self.receipt.advice == "may stop"
 
+    @property
+    def idle_seconds(self) -> float:
+        """How long nothing has come; zero while a file waits to be whole."""
+        return 0.0 if self._known or not self._in_sight else time.monotonic() - self._last_news
+
     def poll(self, ended: Callable[[], bool] = lambda: False) -> None:
         """Look once, and post all files that are whole, in order; one that is not holds back those behind it."""
         now = time.monotonic()
         before = self._known
-        self._known = seen_again(before, self._sightings(), now)
+        try:
+            sightings = look(self.folder, self.manner.pattern)
+        except OSError as error:  # a network drive that is away for a moment
+            if self._in_sight:
+                self._tell(f"{self.folder} cannot be read, and is tried again: {error}")
+            self._in_sight = False
+            return
+        self._in_sight = True
+        self._known = seen_again(before, self._open_ones(sightings), now)
         if self._known != before:
-            self.last_news = now
+            self._last_news = now
         for one in in_order(self._known.values(), self.manner.order):
             if time.monotonic() - one.since < self.manner.settle_seconds or not self._take(one):
                 return
-            self.last_news = time.monotonic()
+            self._last_news = time.monotonic()
             if ended():
                 return
 
-    def _sightings(self) -> Iterator[Sighting]:
+    def _open_ones(self, sightings: list[Sighting]) -> Iterator[Sighting]:
         """Files that are not dealt with; those left over from a process that was killed are put away."""
-        for one in look(self.folder, self.manner.pattern):
+        for one in sightings:
             if (self.folder / f"{one.name}{MARK}").exists() and self.manner.mark:
                 continue
             if self.list.is_settled(one):
@@ -145,10 +159,20 @@ class Watcher:
             sequence = self.run.next_sequence if self.receipt is None else self.receipt.sequence + 1
             self.list.add(Entry(sighting.name, sighting.n_bytes, sighting.changed_ns, sequence))
         for k, piece in enumerate(pieces or series.pieces(0, self.manner.max_batch_bytes)):
-            self.receipt = self.run.post(
-                piece.snapshots, sequence + k, piece.times, patience_seconds=self.manner.patience_seconds
-            )
+            self.receipt = self._send(piece, sequence + k)
         self._tell(f"{sighting.name}: {series.n_snapshots} snapshots, {self._words()}")
+
+    def _send(self, piece: Piece, sequence: int) -> Receipt:
+        assert self.run is not None
+        try:
+            return self.run.post(piece.snapshots, sequence, piece.times, patience_seconds=self.manner.patience_seconds)
+        except ConflictError as error:
+            if error.problem_type != "/problems/sequence-conflict":
+                raise
+            raise ValueError(
+                f"batch {sequence} of run {self.run.id} is not of this folder: another program posts to the run, or a "
+                f"file was changed after it was posted in part. Give each folder a run of its own ({error})"
+            ) from error
 
     def _words(self) -> str:
         assert self.receipt is not None

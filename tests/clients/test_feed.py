@@ -293,6 +293,11 @@ def test_pieces_are_bounded_and_whole(fields: Values, declaration: dict[str, Any
         (lambda f: np.save(f, np.zeros((4, 2, 60))), ("--variable", "u=data"), "--variable gives the fields u"),
         (lambda f: np.save(f, np.zeros((4, 2, 60))), ("--time-axis", "5"), "has no axis 5"),
         (lambda f: np.save(f, np.array([{}]), allow_pickle=True), (), "cannot be read as NPY"),
+        (
+            lambda f: np.savez(f.with_suffix(".npz"), data=np.zeros((4, 2, 60)), time=np.array(["noon"] * 4)),
+            (),
+            "as numbers",
+        ),
     ],
 )
 def test_what_does_not_fit_is_said_before_anything_is_declared(
@@ -306,7 +311,7 @@ def test_what_does_not_fit_is_said_before_anything_is_declared(
 ) -> None:
     before = len(client.runs())
     write(tmp_path / "bad.npy")
-    done = slackwater(tmp_path / "bad.npy", "--declaration", declared, *options)
+    done = slackwater(next(tmp_path.glob("bad.*")), "--declaration", declared, *options)
     assert done.exit_code == 1, done.output
     assert text in done.output
     assert len(client.runs()) == before

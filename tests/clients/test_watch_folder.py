@@ -329,6 +329,49 @@ def test_the_watch_ends_when_settled_and_leaves_the_rest(
     assert names(folder) == ["b1.npz", "b2.npz", "done"]
 
 
+def test_a_run_that_others_post_to_ends_the_watch(
+    folder: Path, client: Client, declaration: dict[str, Any], make_snapshots: Make
+) -> None:
+    run = client.declare(declaration)
+    one = watcher(folder, run, client)
+    write(folder / "a.npz", make_snapshots(5))
+    one.poll()
+    run.post(make_snapshots(7, seed=1), 1)
+    write(folder / "b.npz", make_snapshots(5, seed=2))
+    with pytest.raises(ValueError, match="another program posts to the run"):
+        one.poll()
+    one.list.close()
+    assert names(folder) == ["b.npz", "done"]
+
+
+def test_a_folder_that_is_away_for_a_moment_is_tried_again(
+    folder: Path, client: Client, declaration: dict[str, Any], make_snapshots: Make
+) -> None:
+    one = watcher(folder, client.declare(declaration), client)
+    away = folder.rename(folder.with_name("away"))
+    one.poll()
+    one.poll()
+    assert one.idle_seconds == 0.0
+    away.rename(folder)
+    write(folder / "a.npz", make_snapshots(5))
+    one.poll()
+    one.list.close()
+    assert names(folder) == ["done"]
+
+
+def test_the_watch_does_not_end_while_a_file_waits(folder: Path, client: Client, declaration: dict[str, Any]) -> None:
+    one = watcher(folder, client.declare(declaration), client, give_up_seconds=60.0)
+    (folder / "half.npz").write_bytes(b"PK")
+    one.poll()
+    time.sleep(0.02)
+    assert one.idle_seconds == 0.0
+    (folder / "half.npz").unlink()
+    one.poll()
+    time.sleep(0.02)
+    assert one.idle_seconds > 0.0
+    one.list.close()
+
+
 def test_a_damaged_list_is_refused_and_a_torn_line_dropped(folder: Path) -> None:
     kept = PostedList(folder)
     kept.bind("some-run")

@@ -12,7 +12,7 @@
 #include <stdio.h>
 #include <stdlib.h>
 
-enum { ROWS = 16, COLUMNS = 60, EVERY = 40, LONGEST = 400000 };
+enum { ROWS = 16, COLUMNS = 60, EVERY = 120, LONGEST = 400000 };
 
 static const double SPACING = 0.01, STEP = 0.004, SPEED = 1.0, DIFFUSIVITY = 1.5e-3; /* m, s, m/s, m2/s */
 
@@ -43,7 +43,7 @@ static double wander(double value, double memory)
 
 static double inlet(int row, double pulse, double sway)
 {
-    double height = ((row + 0.5) / ROWS - 0.5 - 0.08 * sway) / 0.1;
+    double height = ((row + 0.5) / ROWS - 0.5 - 0.18 * sway) / 0.2;
     return (10.0 + 4.0 * pulse) * 0.5 * (1.0 + tanh(height));
 }
 
@@ -122,8 +122,8 @@ int main(int argc, char **argv)
 
     slackwater *run = declare();
     for (; step < LONGEST && !may_stop; step++) {
-        pulse = wander(pulse, 1.0);
-        sway = wander(sway, 0.7);
+        pulse = wander(pulse, 4.0);
+        sway = wander(sway, 4.0);
         advance(pulse, sway);
         if (step % EVERY == 0)
             may_stop = post(run, step * STEP, whole, counts, starts);

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+import httpx
 import pytest
 
 ROOT = Path(__file__).parents[2]
@@ -48,6 +49,18 @@ def clean_environment(url: str, **more: str) -> dict[str, str]:
     """The environment without settings of ours but the address of the service."""
     kept = {name: value for name, value in os.environ.items() if not name.startswith("SLACKWATER_")}
     return {**kept, "SLACKWATER_URL": url, **more}
+
+
+def check_ended_on_advice(url: str, name: str, n_sent: int) -> None:
+    """Assert that the newest run of this name is closed, holds what was sent, and was settled at one of its looks.
+
+    The last look may find it unsettled again: a bound near its tolerance may rise above it.
+    """
+    with httpx.Client(base_url=url, trust_env=False) as http:
+        run = next(run for run in http.get("/v1/runs").json()["runs"] if run["declaration"]["name"] == name)
+        assert (run["status"], run["n_snapshots"]) == ("closed", n_sent)
+        looks = http.get(f"/v1/runs/{run['id']}/convergence/history").json()["evaluations"]
+    assert "settled" in {look["verdict"]["state"] for look in looks}
 
 
 @dataclass(frozen=True)

@@ -13,7 +13,8 @@ def page(title: str, body: str) -> str:
     return (
         '<!doctype html><html lang="en"><head><meta charset="utf-8">'
         '<meta name="viewport" content="width=device-width, initial-scale=1">'
-        f'<title>{escape(title)}</title><link rel="stylesheet" href="/page/plain.css"></head><body>{body}</body></html>'
+        '<link rel="icon" href="/page/icon.svg" type="image/svg+xml"><link rel="stylesheet" href="/page/plain.css">'
+        f"<title>{escape(title)}</title></head><body><main>{body}</main></body></html>"
     )
 
 

@@ -46,9 +46,21 @@ def test_the_rules_of_axe(
     page = watch(service.url, color_scheme=scheme, bypass_csp=True).open(view.format(run=run))
     _settle(page)
     page.evaluate(axe)
+    assert _violations(page) == []
+
+
+@pytest.mark.parametrize("path", ["/docs", "/problems/busy"])
+def test_the_plain_pages(watch: Callable[..., Watched], service: RunningService, axe: str, path: str) -> None:
+    page = watch(service.url, bypass_csp=True).page
+    page.goto(f"{service.url}{path}")
+    page.evaluate(axe)
+    assert _violations(page) == []
+
+
+def _violations(page: Any) -> list[Any]:
     tags = ["wcag2a", "wcag2aa", "wcag21a", "wcag21aa", "wcag22aa", "best-practice"]
     found = page.evaluate("(tags) => axe.run({ runOnly: tags })", tags)
-    assert [(one["id"], [node["html"] for node in one["nodes"]]) for one in found["violations"]] == []
+    return [(one["id"], [node["html"] for node in one["nodes"]]) for one in found["violations"]]
 
 
 def test_a_walk_with_the_keyboard(watch: Callable[..., Watched], service: RunningService, run: str) -> None:
@@ -115,6 +127,11 @@ def test_it_prints(watch: Callable[..., Watched], service: RunningService, run: 
     page = watch(service.url).open(f"/runs/{run}")
     _settle(page)
     page.emulate_media(media="print")
+    for chart in page.locator(".chart canvas").all():  # nothing is cut off on a narrower sheet
+        page.set_viewport_size({"width": 700, "height": 900})
+        assert chart.bounding_box()["width"] > 150
+        frame = chart.evaluate("(canvas) => canvas.closest('.chart').getBoundingClientRect().right")
+        assert chart.bounding_box()["x"] + chart.bounding_box()["width"] <= frame + 1
     assert page.locator("#theme").is_hidden()
     assert page.locator(".verdict .answer").is_visible()
     assert len(page.pdf()) > 10_000

@@ -78,7 +78,7 @@ def assess(moments: Moments, criterion: Criterion, context: Context) -> Assessme
 
     Between looks (``context.at_look`` false) the numbers are new and the verdict is that of the last look.
     """
-    evidence = gather(moments, criterion, context.n_rows)
+    evidence = gather(moments, criterion, context.n_rows, context.settled_groups)
     if context.at_look or not context.previous:
         findings = failing_clauses(evidence, criterion, context)
         look = decide(findings, context.n_snapshots, evidence.groups, evidence.bound_sine, context.previous, criterion)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from streaming.declaration import Criterion, Reference
 from streaming.energies import group_halfwidth
@@ -12,6 +12,7 @@ from streaming.misalignment import Misalignment, misalignment, variance_plateau
 from streaming.modal import ModalMoments, modal_moments
 from streaming.moments import Moments
 from streaming.motion import Motion
+from streaming.report import State
 from streaming.stationarity import Drift, Startup, find_drift, find_startup
 from streaming.verdict import Look
 
@@ -48,6 +49,12 @@ class Context:
     at_look: bool = True
     reference: Reference | None = None
     motion: Motion = field(default_factory=Motion)
+
+    @property
+    def settled_groups(self) -> tuple[Group, ...] | None:
+        """Groups that the last look called settled, or None."""
+        last = self.previous[-1] if self.previous else None
+        return last.groups if last is not None and last.groups and last.state == State.SETTLED else None
 
 
 @dataclass(frozen=True)
@@ -87,10 +94,21 @@ class Evidence:
         return max((m.bound for m in self.misalignments), default=1.0)
 
 
-def gather(moments: Moments, criterion: Criterion, n_rows: int | None) -> Evidence:
-    """Measure everything that the verdict rests on."""
+def gather(
+    moments: Moments, criterion: Criterion, n_rows: int | None, settled_groups: tuple[Group, ...] | None = None
+) -> Evidence:
+    """Measure everything that the verdict rests on.
+
+    Groups that have settled stay as they were judged: the span is what was promised, and that a longer record can
+    take it apart does not make it less well known.
+    """
     startup = Startup(0, False) if criterion.startup == "keep" else find_startup(moments, criterion.n_modes)
-    modal, grouping = _grouped(moments.since(startup.first_block), criterion.n_modes, n_rows)
+    kept = moments.since(startup.first_block)
+    if settled_groups is None:
+        modal, grouping = _grouped(kept, criterion.n_modes, n_rows)
+    else:
+        modal = modal_moments(kept, settled_groups[-1][1] + SPARE_MODES, n_rows)
+        grouping = replace(find_groups(modal, criterion.n_modes), groups=settled_groups, open_start=None)
     groups = wanted_groups(grouping, criterion.n_modes, modal.n_scored)
     plateau = variance_plateau(modal, groups)
     return Evidence(

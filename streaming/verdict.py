@@ -105,9 +105,10 @@ def _holding(agreeing: int, hold: int) -> Reason:
 
 def _settled(look: Look, criterion: Criterion) -> Reason:
     bound = math.degrees(math.asin(look.bound_sine))
+    within = "within" if bound <= criterion.max_angle_deg else "since they settled wavering about"
     text = (
         f"The largest misalignment bound of the wanted modes is {bound:.1f} deg at "
-        f"{100 * criterion.confidence:g} % confidence, within the tolerated {criterion.max_angle_deg:g} deg. "
+        f"{100 * criterion.confidence:g} % confidence, {within} the tolerated {criterion.max_angle_deg:g} deg. "
         "The sampling of what was recorded suffices; states that the flow has not visited are not in it."
     )
     return Reason(code="settled", text=text)

@@ -103,7 +103,7 @@ def _kernel(name: str, about: str, max_snapshots: int, memory: float, c: float, 
     def draw(seed: int, n: int) -> Sample:
         return kernel_field(seed, n, memory, c)
 
-    return Process(name, about, 100, n_modes, 16, max_snapshots, draw)
+    return Process(name, about, 100, n_modes, 20, max_snapshots, draw)
 
 
 PROCESSES = {

@@ -166,6 +166,20 @@ class TestNeverSettledTooEarly:
         assert self.states(stream)[-1] == State.SETTLED
         assert stream.convergence().groups[0].modes == [1, 2]
 
+    def test_a_settled_verdict_does_not_flicker(self, make_stream: MakeStream) -> None:
+        """Modes 2 and 3 are nearly equal: one group when it settles, taken apart by a longer record."""
+        rng = np.random.default_rng(21)
+        structures = np.linalg.qr(rng.standard_normal((60, 4)))[0].T * np.array([[8.0], [4.0], [3.75], [1.0]])
+        for seed in range(4):
+            amplitudes = np.random.default_rng(seed).standard_normal((12_000, 4))
+            stream = make_stream(60, retained_rank=8, criterion={"n_modes": 2, "max_angle_deg": 12.0})
+            stream.absorb(amplitudes @ structures + 0.3 * rng.standard_normal((12_000, 60)))
+            states = self.states(stream)
+            first = states.index(State.SETTLED)
+            assert set(states[first:]) == {State.SETTLED}
+            groups = [[group.modes for group in report.groups] for report in stream.history[first:]]
+            assert all(later == groups[0] for later in groups)
+
     def test_ten_snapshots(self, make_stream: MakeStream) -> None:
         stream = make_stream(60, retained_rank=12, criterion=self.CRITERION)
         stream.absorb(field(10))

@@ -40,7 +40,7 @@ def campaign(
             shown: Any = _overview(found) if found else f"no campaigns at {client.url}"
         else:
             found = client.campaign(name, between.split(",") if between else ())
-            shown = _detail(found)
+            shown = detail(found)
         if as_json:
             print(json.dumps(found, indent=2))
         else:
@@ -55,7 +55,7 @@ def _overview(campaigns: list[dict[str, Any]]) -> Table:
     return table
 
 
-def _detail(found: dict[str, Any]) -> Group:
+def detail(found: dict[str, Any]) -> Group:
     points = found["points"]
     labels = list(dict.fromkeys(name for point in points for name in point["labels"]))
     n_modes = min(SHOWN_MODES, max((len(point["modes"]) for point in points), default=0))

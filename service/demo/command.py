@@ -6,7 +6,7 @@ import sys
 import tempfile
 import time
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Literal
 
 import typer
 from rich.console import Console
@@ -16,6 +16,7 @@ from service.demo.duct import FIXED_PLAN_SNAPSHOTS
 from service.demo.findings import gather, tell
 from service.demo.processes import DemoError, Program, address_of, program, termination_as_exit
 from service.demo.screen import Screen, Sight, screen
+from service.demo.tunnel import run_tunnel
 from slackwater_client import Client, ConvergenceReport, Run, SlackwaterError
 
 POLL_SECONDS = 0.4
@@ -25,6 +26,10 @@ RUN_NAME = "intake duct"
 
 
 def demo(
+    scene: Annotated[
+        Literal["intake", "tunnel"],
+        typer.Argument(help="A solver that ends itself, or a campaign of five test points."),
+    ] = "intake",
     keep: Annotated[bool, typer.Option("--keep", help="Leave the service up at the end, until Ctrl-C.")] = False,
     directory: Annotated[
         Path | None, typer.Option(help="Empty or new directory for data, pictures and logs [a temporary one].")
@@ -34,10 +39,15 @@ def demo(
 
     Starts a service on a free port of this machine and a solver of the air flow through an intake with three bars,
     which posts its snapshots to the service. Ends with code 0 when the modes have settled.
+
+    With tunnel: a rig measures five test points of a roof panel, one after another, and drops files in a folder that is
+    watched; one point drifts and one is inseparable.
     """
     console = Console()
     try:
         with termination_as_exit():
+            if scene == "tunnel":
+                raise typer.Exit(run_tunnel(console, prepared(directory)))
             code = run_demo(console, prepared(directory), keep)
     except (DemoError, SlackwaterError, OSError) as error:
         print(f"slackwater: {error}", file=sys.stderr)

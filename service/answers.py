@@ -25,6 +25,36 @@ class ReceiptForecast(Model):
     high: int
 
 
+class PartStatus(Model):
+    """One part: how far it has come, and whether it is started again."""
+
+    part: int
+    start: int
+    stop: int
+    next_sequence: int = Field(description="number of the first batch of which this part is missing")
+    n_waiting: int = Field(description="batches it has sent that wait for other parts or for batches before them")
+    last_stored: str | None = Field(description="when it last sent something new")
+    n_repeats: int = Field(description="batches it sent again since the service started, as after its own restart")
+    last_repeat: str | None
+
+
+class PartsStatus(Model):
+    """The parts of a run, the slowest first."""
+
+    n_parts: int
+    n_late: int = Field(description="parts that what is stored waits for; 0 when nothing waits")
+    late_since: str | None = Field(description="when the first batch came that now waits for them")
+    late_seconds: float | None
+    slowest: list[PartStatus] = Field(max_length=64)
+
+
+class PartResource(PartStatus):
+    """One part, and where its rank goes on."""
+
+    last_time: float | None = Field(description="time of its last snapshot stored without a gap, when times are given")
+    expected_snapshots: int | None = Field(description="snapshots that other parts have sent for its next batch")
+
+
 class RunResource(Model):
     """A run: as declared, and how far it has come."""
 
@@ -39,6 +69,7 @@ class RunResource(Model):
     applied_through: int | None = Field(description="last batch that the engine has taken")
     last_time: float | None = Field(description="time of the last snapshot stored without a gap, when times are given")
     waiting: Waiting | None
+    parts: PartsStatus | None = Field(description="null in a run without parts")
     journal_bytes: int = Field(description="accepted bytes that no checkpoint covers yet")
     verdict: State
     advice: Advice
@@ -66,6 +97,7 @@ class Receipt(Model):
     )
     n_snapshots: int
     duplicate: bool
+    complete: bool = Field(description="all parts of this batch are stored; always true without parts")
     applied_through: int | None = Field(description="last batch that the engine has taken")
     verdict: State
     advice: Advice
@@ -97,7 +129,9 @@ class ProblemDocument(Model):
     errors: list[dict[str, JsonValue]] | None = None
 
 
-def run_resource(run: RunRecord, published: Published, backlog: Backlog, last_time: float | None) -> RunResource:
+def run_resource(
+    run: RunRecord, published: Published, backlog: Backlog, last_time: float | None, parts: PartsStatus | None
+) -> RunResource:
     """The run as it stands."""
     to_go = published.snapshots_to_go
     waiting = Waiting(missing_sequence=run.next_sequence, n_batches=backlog.n_waiting)
@@ -113,6 +147,7 @@ def run_resource(run: RunRecord, published: Published, backlog: Backlog, last_ti
         applied_through=published.applied_through,
         last_time=last_time,
         waiting=waiting if backlog.n_waiting else None,
+        parts=parts,
         journal_bytes=backlog.n_bytes,
         verdict=published.verdict,
         advice=published.advice,
@@ -128,6 +163,7 @@ def receipt(record: BatchRecord, duplicate: bool, published: Published) -> Recei
         first_snapshot=record.first_snapshot,
         n_snapshots=record.n_snapshots,
         duplicate=duplicate,
+        complete=record.complete,
         applied_through=published.applied_through,
         verdict=published.verdict,
         advice=published.advice,

@@ -16,6 +16,7 @@ from service import (
     routes_events,
     routes_export,
     routes_page,
+    routes_parts,
     routes_plain,
     routes_results,
     routes_runs,
@@ -60,6 +61,7 @@ def create_app(service: Service) -> FastAPI:
     for routes in (
         routes_runs,
         routes_batches,
+        routes_parts,
         routes_export,  # before the results: /modes/1.vti is no mode called 1.vti
         routes_results,
         routes_signals,

@@ -51,8 +51,9 @@ class Applier:
         self.declaration = place.reader.run(run_id).declaration
         self._stream: SnapshotStream | None = None
         self._batch: JournalBatch | None = None
-        # Batches that an earlier process stored are compared with their digests before they are used.
-        self._trusted_from = place.reader.run(run_id).next_sequence
+        # What an earlier process may have stored, also ahead of a gap, is compared with its digests before it is used.
+        last = place.reader.last_sequence(run_id)
+        self._trusted_from = 0 if last is None else last + 1
         self._uncovered_bytes = 0
         self._n_looks = 0
         self._refreshed = (0.0, 0.0)
@@ -92,7 +93,8 @@ class Applier:
 
     def _open_batch(self, record: BatchRecord) -> JournalBatch:
         if self._batch is None or self._batch.record.sequence != record.sequence:
-            batch = JournalBatch(self._folder, record)
+            parts = self._place.reader.part_batches(self.run_id, record.sequence)
+            batch = JournalBatch(self._folder, record, parts)
             if record.sequence < self._trusted_from:
                 batch.verify()
             self._batch = batch

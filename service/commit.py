@@ -14,17 +14,21 @@ import numpy.typing as npt
 from service.durable import storage_problem
 from service.folders import RunFolder
 from service.journal import Draft
+from service.parts import add_part, check_agrees
 from service.problems import Problem
-from service.records import BATCH_COLUMNS, BatchRecord, RunRecord, batch_from, one
-from service.registry import Registry, add_event, find_batch, find_run
-from service.times import check_neighbours
+from service.records import BATCH_COLUMNS, BatchRecord, PartBatch, RunRecord, batch_from, one
+from service.registry import Registry, add_event, find_batch, find_run, now
+from service.times import check_neighbours, same_times
 
 BUSY_SECONDS = 2
 
 
 @dataclass(frozen=True)
 class Offer:
-    """A whole, checked body and what its request said about it; ``sequence`` None takes the next number."""
+    """A whole, checked body and what its request said about it.
+
+    ``sequence`` None takes the next number; ``part`` None is a batch of whole snapshots.
+    """
 
     run_id: str
     sequence: int | None
@@ -33,6 +37,7 @@ class Offer:
     n_snapshots: int
     n_bytes: int
     times: npt.NDArray[np.float64] | None
+    part: int | None = None
 
     @property
     def times_bytes(self) -> bytes | None:
@@ -43,7 +48,10 @@ def repeat_of(existing: BatchRecord | None, offer: Offer) -> BatchRecord | None:
     """The stored batch when the offer repeats it, None when it is new. Raises the 409 and 422 problems."""
     if existing is None:
         return None
-    if existing.digest == offer.digest and existing.times_bytes == offer.times_bytes:
+    equal_times = existing.times_bytes == offer.times_bytes
+    if offer.part is not None:  # its times may be those of another part, which differ by rounding
+        equal_times = same_times(existing.times, offer.times)
+    if existing.digest == offer.digest and equal_times:
         return existing
     differs = "other bytes" if existing.digest != offer.digest else "other times"
     if offer.sequence is None:
@@ -53,9 +61,10 @@ def repeat_of(existing: BatchRecord | None, offer: Offer) -> BatchRecord | None:
             "key for new data",
             sequence=existing.sequence,
         )
+    what = f"batch {offer.sequence}" if offer.part is None else f"part {offer.part} of batch {offer.sequence}"
     raise Problem(
         "sequence-conflict",
-        f"batch {offer.sequence} is stored with {differs} (sha-256 {existing.digest.hex()}); a stored batch is "
+        f"{what} is stored with {differs} (sha-256 {existing.digest.hex()}); a stored batch is "
         "never replaced: send new data under the run's next_sequence",
         sequence=offer.sequence,
         stored_sha256=existing.digest.hex(),
@@ -83,10 +92,14 @@ def commit_batch(
                 return existing, True
             check_open(run)
             sequence = _place(db, run, offer, max_waiting)
-            _check_times(db, offer, sequence)
-            kept = folder.batch(sequence)
+            begun = find_batch(db, run.id, sequence)  # by another part
+            if begun is None:
+                _check_times(db, offer, sequence)
+            else:
+                check_agrees(begun, offer.n_snapshots, offer.times)
+            kept = folder.batch(sequence, offer.part)
             draft.keep(kept)
-            record = _insert(db, run, offer, sequence)
+            record = _insert(db, run, offer, sequence, begun)
         return record, False
     except OSError as error:
         raise storage_problem(error) from error
@@ -98,7 +111,7 @@ def commit_batch(
 
 def _existing(db: sqlite3.Connection, offer: Offer) -> BatchRecord | None:
     if offer.sequence is not None:
-        return find_batch(db, offer.run_id, offer.sequence)
+        return find_batch(db, offer.run_id, offer.sequence, offer.part)
     if offer.key is None:
         return None
     row = db.execute(
@@ -114,7 +127,7 @@ def _place(db: sqlite3.Connection, run: RunRecord, offer: Offer, max_waiting: in
         sequence = 0 if highest is None else int(highest) + 1
     else:
         sequence = offer.sequence
-    if sequence > run.next_sequence:
+    if sequence > run.next_sequence and find_batch(db, run.id, sequence) is None:
         waiting = one(
             db.execute("SELECT count(*) FROM batches WHERE run = ? AND sequence > ?", (run.id, run.next_sequence))
         )
@@ -149,41 +162,54 @@ def _check_times(db: sqlite3.Connection, offer: Offer, sequence: int) -> None:
         check_neighbours(float(offer.times[0]), float(offer.times[-1]), before and before[0], after and after[0])
 
 
-def _insert(db: sqlite3.Connection, run: RunRecord, offer: Offer, sequence: int) -> BatchRecord:
-    first, last = (None, None) if offer.times is None else (float(offer.times[0]), float(offer.times[-1]))
-    db.execute(
-        f"INSERT INTO batches ({BATCH_COLUMNS}) VALUES (?, ?, ?, ?, ?, NULL, ?, ?, ?, ?, 0)",
-        (
-            run.id,
-            sequence,
-            offer.digest,
-            offer.n_snapshots,
-            offer.n_bytes,
-            offer.times_bytes,
-            first,
-            last,
-            offer.key,
-        ),
-    )
+def _insert(
+    db: sqlite3.Connection, run: RunRecord, offer: Offer, sequence: int, begun: BatchRecord | None
+) -> BatchRecord:
+    if begun is None:
+        _insert_batch(db, run, offer, sequence)
+    if offer.part is not None:
+        add_part(db, PartBatch(sequence, offer.part, offer.digest, offer.n_bytes), run.id)
+    elif sequence != run.next_sequence:
+        add_event(db, run.id, "gap", {"missing": run.next_sequence, "stored": sequence})
     if sequence == run.next_sequence:
         _number_snapshots(db, run)
-    else:
-        add_event(db, run.id, "gap", {"missing": run.next_sequence, "stored": sequence})
     record = find_batch(db, run.id, sequence)
     assert record is not None
     return record
 
 
+def _insert_batch(db: sqlite3.Connection, run: RunRecord, offer: Offer, sequence: int) -> None:
+    """The row of a batch; in a run that comes in parts an empty one, to which `add_part` adds."""
+    first, last = (None, None) if offer.times is None else (float(offer.times[0]), float(offer.times[-1]))
+    n_parts = len(run.declaration.parts or ())
+    db.execute(
+        f"INSERT INTO batches ({BATCH_COLUMNS}) VALUES (?, ?, ?, ?, ?, NULL, ?, ?, ?, ?, ?, ?, 0)",
+        (
+            run.id,
+            sequence,
+            b"" if n_parts else offer.digest,
+            offer.n_snapshots,
+            0 if n_parts else offer.n_bytes,
+            offer.times_bytes,
+            first,
+            last,
+            offer.key,
+            n_parts,
+            now(),
+        ),
+    )
+
+
 def _number_snapshots(db: sqlite3.Connection, run: RunRecord) -> None:
-    """Give snapshot numbers to the batch that just came, and to those that waited for it."""
+    """Give snapshot numbers to the batch that just came, if it is complete, and to those that waited for it."""
     sequence, snapshot = run.next_sequence, run.next_snapshot
     rows = db.execute(
-        "SELECT sequence, n_snapshots FROM batches WHERE run = ? AND sequence >= ? ORDER BY sequence",
+        "SELECT sequence, n_snapshots, missing_parts FROM batches WHERE run = ? AND sequence >= ? ORDER BY sequence",
         (run.id, sequence),
     )
     numbered: list[tuple[int, str, int]] = []
-    for stored, n_snapshots in rows:
-        if stored != sequence:
+    for stored, n_snapshots, missing_parts in rows:
+        if stored != sequence or missing_parts:
             break
         numbered.append((snapshot, run.id, sequence))
         sequence, snapshot = sequence + 1, snapshot + n_snapshots

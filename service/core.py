@@ -14,6 +14,7 @@ from service.durable import DirectoryLock, Poison
 from service.folders import Folders
 from service.journal import sweep
 from service.leases import Leases
+from service.parts import RepeatNotes
 from service.reading import ALL, Reader
 from service.records import RunRecord
 from service.registry import Registry
@@ -39,6 +40,7 @@ class Service:
         self.board = Board(self.bell)
         self.leases = Leases()
         self.counters: Counter[str] = Counter()
+        self.repeats = RepeatNotes()
         self.n_streams = self.n_waits = self.n_bodies = self.incoming_bytes = 0
         self._lock = DirectoryLock(settings.data_directory)
         try:
@@ -85,7 +87,7 @@ class Service:
         """Drop what was never acknowledged, publish the last word, and take up the work."""
         folder = self.folders.run(run.id)
         folder.create(self.poison)
-        sweep(folder, {batch.sequence for batch in self.reader.kept_batches(run.id)})
+        sweep(folder, {folder.batch(*kept).name for kept in self.reader.kept_batches(run.id)})
         numbers = [checkpoint.n_snapshots for checkpoint in self.reader.checkpoints(run.id)]
         known = {folder.checkpoint(number).name for number in numbers}
         for path in folder.checkpoints.iterdir():

@@ -32,8 +32,14 @@ class RunFolder:
         """``weights``, ``positions`` or ``triangles``, as an NPY file."""
         return self.path / f"{name}.npy"
 
-    def batch(self, sequence: int) -> Path:
-        return self.journal / f"{sequence:015d}.npy"
+    def batch(self, sequence: int, part: int | None = None) -> Path:
+        """The file of one batch, or of what one part sent for it."""
+        name = f"{sequence:015d}" if part is None else f"{sequence:015d}.{part:05d}"
+        return self.journal / f"{name}.npy"
+
+    def batch_files(self, sequence: int, n_parts: int | None) -> list[Path]:
+        """All files that one batch can have."""
+        return [self.batch(sequence, part) for part in ([None] if n_parts is None else range(n_parts))]
 
     def checkpoint(self, n_snapshots: int) -> Path:
         return self.checkpoints / f"{n_snapshots:012d}"

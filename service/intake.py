@@ -17,9 +17,10 @@ from service.core import Service
 from service.durable import check_free_space, storage_problem
 from service.journal import Draft
 from service.npy import ArrayHeader
+from service.parts import find_declared
 from service.problems import Problem
 from service.records import BatchRecord, RunRecord
-from service.shapes import Expected, expect_batch
+from service.shapes import Expected, expect_batch, expect_part
 from service.times import TimesGiven
 
 # Pieces handed to a thread: large enough that the hand-over costs nothing, small beside any bound on memory.
@@ -168,23 +169,26 @@ async def store_batch(
     request: Request,
     service: Service,
     run_id: str,
+    part: int | None,
     sequence: int | None,
     key: str | None,
     given: TimesGiven,
 ) -> tuple[BatchRecord, bool]:
-    """Store one batch durably, or recognise it. Returns its record, and whether it is a repeat."""
+    """Store one batch, or one part of it, durably, or recognise it. Returns its record, and whether it is a repeat."""
     run = service.reader.run(run_id)
+    declared = find_declared(run, part)
     n_bytes = check_headers(request, service.settings.max_body_bytes)
-    existing = _stored(service, run_id, sequence, key)
+    existing = _stored(service, run_id, sequence, key, part)
     if existing is None:
         check_open(run)
         check_capacity(service, run, sequence, n_bytes)
-    expected = expect_batch(run.declaration, service.settings.max_snapshots_per_batch)
+    most = service.settings.max_snapshots_per_batch
+    expected = expect_part(run.declaration, declared, most) if declared else expect_batch(run.declaration, most)
     async with received(request, service, run, expected, n_bytes) as body:
         n_snapshots = body.header.shape[0]
         times = given.for_batch(n_snapshots, run.declaration)
-        offer = Offer(run_id, sequence, key, body.digest, n_snapshots, n_bytes, times)
-        repeat = repeat_of(_stored(service, run_id, sequence, key), offer)
+        offer = Offer(run_id, sequence, key, body.digest, n_snapshots, n_bytes, times, part)
+        repeat = repeat_of(_stored(service, run_id, sequence, key, part), offer)
         if repeat is not None:
             return repeat, True
         loop = asyncio.get_running_loop()
@@ -193,9 +197,11 @@ async def store_batch(
         return await asyncio.shield(loop.run_in_executor(service.commits, _commit, service, body.draft, offer))
 
 
-def _stored(service: Service, run_id: str, sequence: int | None, key: str | None) -> BatchRecord | None:
+def _stored(
+    service: Service, run_id: str, sequence: int | None, key: str | None, part: int | None
+) -> BatchRecord | None:
     if sequence is not None:
-        return service.reader.batch(run_id, sequence)
+        return service.reader.batch(run_id, sequence, part)
     return None if key is None else service.reader.batch_with_key(run_id, key)
 
 

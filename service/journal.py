@@ -11,6 +11,7 @@ import hashlib
 import os
 import threading
 import uuid
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
@@ -21,7 +22,7 @@ from service.durable import Poison, sync_directory, sync_file
 from service.folders import RunFolder
 from service.npy import MAX_HEADER_BYTES, ArrayHeader, NpyError, header_length, parse_header
 from service.problems import Problem
-from service.records import BatchRecord
+from service.records import BatchRecord, PartBatch
 from service.shapes import Expected
 from streaming.declaration import RunDeclaration
 
@@ -136,47 +137,70 @@ def _write_all(descriptor: int, piece: bytes) -> None:
         view = view[os.write(descriptor, view) :]
 
 
-class JournalBatch:
-    """One stored batch, read back a few snapshots at a time."""
+class JournalFile:
+    """The stored body of one batch, or of one part of it, read back a few snapshots at a time."""
 
-    def __init__(self, folder: RunFolder, record: BatchRecord) -> None:
-        self.record = record
-        self.path = folder.batch(record.sequence)
+    def __init__(self, path: Path, n_bytes: int, digest: bytes) -> None:
+        self.path, self._digest = path, digest
         try:
-            with self.path.open("rb") as file:
+            with path.open("rb") as file:
                 start = file.read(MAX_HEADER_BYTES)
             length = header_length(start)
-            if length is None or self.path.stat().st_size != record.n_bytes:
-                raise JournalError(f"{self.path} has not the {record.n_bytes} bytes that were acknowledged")
+            if length is None or path.stat().st_size != n_bytes:
+                raise JournalError(f"{path} has not the {n_bytes} bytes that were acknowledged")
             self._header = parse_header(start[:length])
         except (OSError, NpyError) as error:
-            raise JournalError(f"{self.path} cannot be read: {error}; restore it from a copy") from error
+            raise JournalError(f"{path} cannot be read: {error}; restore it from a copy") from error
 
     def verify(self) -> None:
         """Compare with the digest that was acknowledged. Raises JournalError."""
         with self.path.open("rb") as file:
             digest = hashlib.file_digest(file, "sha256").digest()
-        if digest != self.record.digest:
+        if digest != self._digest:
             raise JournalError(f"{self.path} is damaged (its sha-256 has changed); restore it from a copy")
 
-    def snapshots(self, start: int, stop: int, declaration: RunDeclaration) -> npt.NDArray[Any]:
-        """Snapshots [start, stop) of the batch, (n, n_rows), in the declared dtype."""
-        rows = declaration.n_rows
+    def values(self, start: int, stop: int, n_rows: int) -> npt.NDArray[Any]:
+        """Snapshots [start, stop), (n, n_rows), in the type in which they came."""
         values = np.fromfile(
             self.path,
             self._header.dtype,
-            (stop - start) * rows,
-            offset=self._header.header_bytes + start * rows * self._header.dtype.itemsize,
+            (stop - start) * n_rows,
+            offset=self._header.header_bytes + start * n_rows * self._header.dtype.itemsize,
         )
-        if len(values) != (stop - start) * rows:
+        if len(values) != (stop - start) * n_rows:
             raise JournalError(f"{self.path} ended early while it was read")
-        return values.reshape(stop - start, rows).astype(declaration.real_dtype, copy=False)
+        return values.reshape(stop - start, n_rows)
 
 
-def sweep(folder: RunFolder, kept: set[int]) -> list[Path]:
+class JournalBatch:
+    """One stored batch: one file, or one for each of ``parts``."""
+
+    def __init__(self, folder: RunFolder, record: BatchRecord, parts: Sequence[PartBatch] = ()) -> None:
+        self.record = record
+        self._files = [JournalFile(folder.batch(part.sequence, part.part), part.n_bytes, part.digest) for part in parts]
+        if not parts:
+            self._files = [JournalFile(folder.batch(record.sequence), record.n_bytes, record.digest)]
+
+    def verify(self) -> None:
+        """Compare all files with the digests that were acknowledged. Raises JournalError."""
+        for file in self._files:
+            file.verify()
+
+    def snapshots(self, start: int, stop: int, declaration: RunDeclaration) -> npt.NDArray[Any]:
+        """Snapshots [start, stop) of the batch, (n, n_rows), in the declared dtype."""
+        if declaration.parts is None:
+            return self._files[0].values(start, stop, declaration.n_rows).astype(declaration.real_dtype, copy=False)
+        n_fields = len(declaration.fields)
+        whole = np.empty((stop - start, n_fields, declaration.n_points), declaration.real_dtype)
+        for part, file in zip(declaration.parts, self._files, strict=True):
+            rows = file.values(start, stop, n_fields * part.n_points)
+            whole[:, :, part.start : part.stop] = rows.reshape(stop - start, n_fields, part.n_points)
+        return whole.reshape(stop - start, declaration.n_rows)
+
+
+def sweep(folder: RunFolder, kept: set[str]) -> list[Path]:
     """Remove what was never acknowledged, or was covered before: drafts, and files the registry does not keep."""
-    known = {folder.batch(sequence).name for sequence in kept}
-    removed = [path for path in folder.journal.glob("*") if path.name not in known]
+    removed = [path for path in folder.journal.glob("*") if path.name not in kept]
     for path in removed:
         path.unlink(missing_ok=True)
     return removed

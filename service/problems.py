@@ -35,6 +35,7 @@ CATALOGUE: dict[str, ProblemType] = {
     "host-refused": ProblemType(403, "Host not served here", "Use the address that the service printed."),
     "not-found": ProblemType(404, "There is no such resource", "See /docs for the operations."),
     "unknown-run": ProblemType(404, "There is no such run", "List the runs with GET /v1/runs."),
+    "unknown-part": ProblemType(404, "There is no such part", "Parts are numbered from 0 as in the declaration."),
     "not-yet": ProblemType(
         404, "Nothing has been computed yet", "Post more snapshots: the first result needs one full block."
     ),
@@ -45,6 +46,17 @@ CATALOGUE: dict[str, ProblemType] = {
         409,
         "Another batch is stored under this sequence number",
         "A stored batch is never replaced: send new data under the run's next_sequence.",
+    ),
+    "parts-disagree": ProblemType(
+        409,
+        "The parts of this batch differ in snapshots or times",
+        "All parts cut their snapshots into the same batches, with the same times.",
+    ),
+    "comes-in-parts": ProblemType(
+        409, "The run comes in parts", "PUT /v1/runs/{run_id}/parts/{part}/batches/{sequence} takes each part."
+    ),
+    "comes-whole": ProblemType(
+        409, "The run was declared without parts", "PUT /v1/runs/{run_id}/batches/{sequence} takes whole snapshots."
     ),
     "run-closed": ProblemType(409, "The run is closed", "Declare a new run for more snapshots."),
     "run-failed": ProblemType(409, "The run has failed", "Read its reason; declare a new run."),

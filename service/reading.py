@@ -8,11 +8,14 @@ from pathlib import Path
 
 from service.records import (
     BATCH_COLUMNS,
+    PART_COLUMNS,
     RUN_COLUMNS,
     Backlog,
     BatchRecord,
     CheckpointRecord,
     Event,
+    PartBatch,
+    PartRecord,
     RunRecord,
     batch_from,
     event_from,
@@ -63,8 +66,53 @@ class Reader:
         )
         return [run_from(row) for row in rows]
 
-    def batch(self, run_id: str, sequence: int) -> BatchRecord | None:
-        return find_batch(self._db, run_id, sequence)
+    def batch(self, run_id: str, sequence: int, part: int | None = None) -> BatchRecord | None:
+        """One batch; with a part only when that part of it has come, and with that part's digest and size."""
+        return find_batch(self._db, run_id, sequence, part)
+
+    def part_batches(self, run_id: str, sequence: int) -> list[PartBatch]:
+        """What has come of one batch, in the order of its parts; nothing in a run without parts."""
+        rows = self._db.execute(
+            "SELECT sequence, part, digest, n_bytes FROM part_batches WHERE run = ? AND sequence = ? ORDER BY part",
+            (run_id, sequence),
+        )
+        return [PartBatch(*row) for row in rows]
+
+    def part(self, run_id: str, part: int) -> PartRecord | None:
+        """How far one declared part has come."""
+        row = self._db.execute(
+            f"SELECT {PART_COLUMNS} FROM parts WHERE run = ? AND part = ?", (run_id, part)
+        ).fetchone()
+        return None if row is None else PartRecord(*row)
+
+    def slowest_parts(self, run_id: str, limit: int) -> list[PartRecord]:
+        """The parts with the lowest next number, those first."""
+        rows = self._db.execute(
+            f"SELECT {PART_COLUMNS} FROM parts WHERE run = ? ORDER BY next_sequence, part LIMIT ?", (run_id, limit)
+        )
+        return [PartRecord(*row) for row in rows]
+
+    def late_parts(self, run_id: str, next_sequence: int) -> int:
+        """Parts that have not sent their share of batch ``next_sequence``."""
+        return int(
+            one(
+                self._db.execute(
+                    "SELECT count(*) FROM parts WHERE run = ? AND next_sequence <= ?", (run_id, next_sequence)
+                )
+            )
+        )
+
+    def waiting_since(self, run_id: str) -> str | None:
+        """When the first of the batches came that now wait; None when none waits."""
+        row = self._db.execute(
+            "SELECT min(arrived) FROM batches WHERE run = ? AND first_snapshot IS NULL", (run_id,)
+        ).fetchone()
+        return None if row is None else row[0]
+
+    def last_sequence(self, run_id: str) -> int | None:
+        """The highest number of which anything is stored."""
+        row = self._db.execute("SELECT max(sequence) FROM batches WHERE run = ?", (run_id,)).fetchone()
+        return None if row is None else row[0]
 
     def batch_with_key(self, run_id: str, key: str) -> BatchRecord | None:
         row = self._db.execute(
@@ -84,12 +132,14 @@ class Reader:
             return None
         return found if snapshot < found.first_snapshot + found.n_snapshots else None
 
-    def kept_batches(self, run_id: str) -> list[BatchRecord]:
-        """Batches whose bytes must still be in the journal."""
+    def kept_batches(self, run_id: str) -> list[tuple[int, int | None]]:
+        """Number, and part if there are any, of all whose bytes must still be in the journal."""
         rows = self._db.execute(
-            f"SELECT {BATCH_COLUMNS} FROM batches WHERE run = ? AND pruned = 0 ORDER BY sequence", (run_id,)
+            "SELECT batches.sequence, part_batches.part FROM batches LEFT JOIN part_batches USING (run, sequence) "
+            "WHERE batches.run = ? AND pruned = 0",
+            (run_id,),
         )
-        return [batch_from(row) for row in rows]
+        return [(sequence, part) for sequence, part in rows]
 
     def backlog(self, run_id: str) -> Backlog:
         row = self._db.execute(

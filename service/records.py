@@ -44,7 +44,10 @@ class RunRecord:
 
 @dataclass(frozen=True)
 class BatchRecord:
-    """One stored batch; ``first_snapshot`` is None while an earlier batch is missing."""
+    """One stored batch, or what has come of it; ``first_snapshot`` is None while an earlier batch is missing.
+
+    Asked for with a part, ``digest`` and ``n_bytes`` are those of that part.
+    """
 
     run: str
     sequence: int
@@ -56,11 +59,38 @@ class BatchRecord:
     first_time: float | None
     last_time: float | None
     idempotency_key: str | None
+    missing_parts: int
+    arrived: str
     pruned: bool
+
+    @property
+    def complete(self) -> bool:
+        """True when all parts are there; a batch of a run without parts always is."""
+        return self.missing_parts == 0
 
     @property
     def times(self) -> npt.NDArray[np.float64] | None:
         return None if self.times_bytes is None else np.frombuffer(self.times_bytes, "<f8").astype(np.float64)
+
+
+@dataclass(frozen=True)
+class PartBatch:
+    """What one part has sent for one batch."""
+
+    sequence: int
+    part: int
+    digest: bytes
+    n_bytes: int
+
+
+@dataclass(frozen=True)
+class PartRecord:
+    """How far one part has come: ``n_stored`` batches in all, those before ``next_sequence`` without a gap."""
+
+    part: int
+    n_stored: int
+    next_sequence: int
+    last_stored: str | None
 
 
 @dataclass(frozen=True)
@@ -94,8 +124,10 @@ class Backlog:
 
 RUN_COLUMNS = "id, declaration, created, status, reason, next_sequence, next_snapshot"
 BATCH_COLUMNS = (
-    "run, sequence, digest, n_snapshots, n_bytes, first_snapshot, times, first_time, last_time, idempotency_key, pruned"
+    "run, sequence, digest, n_snapshots, n_bytes, first_snapshot, times, first_time, last_time, idempotency_key, "
+    "missing_parts, arrived, pruned"
 )
+PART_COLUMNS = "part, n_stored, next_sequence, last_stored"
 
 
 def run_from(row: tuple[Any, ...]) -> RunRecord:

@@ -12,6 +12,7 @@ import sqlite3
 import threading
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import replace
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -116,6 +117,8 @@ class Registry:
                 f"INSERT INTO runs ({RUN_COLUMNS}) VALUES (?, ?, ?, ?, ?, ?, ?)",
                 (run_id, declaration_text, record.created, "open", None, 0, 0),
             )
+            n_parts = len(record.declaration.parts or ())
+            db.executemany("INSERT INTO parts (run, part) VALUES (?, ?)", ((run_id, k) for k in range(n_parts)))
             add_event(db, run_id, "declared", {"name": record.declaration.name})
             return record
 
@@ -131,7 +134,7 @@ class Registry:
 
     def remove_run(self, run_id: str) -> None:
         with self.transaction() as db:
-            for table in ("batches", "evaluations", "checkpoints", "events"):
+            for table in ("batches", "part_batches", "parts", "evaluations", "checkpoints", "events"):
                 db.execute(f"DELETE FROM {table} WHERE run = ?", (run_id,))
             db.execute("DELETE FROM runs WHERE id = ?", (run_id,))
             add_event(db, run_id, "deleted", {})
@@ -202,8 +205,15 @@ def find_run(db: sqlite3.Connection, run_id: str) -> RunRecord:
     return run_from(row)
 
 
-def find_batch(db: sqlite3.Connection, run_id: str, sequence: int) -> BatchRecord | None:
+def find_batch(db: sqlite3.Connection, run_id: str, sequence: int, part: int | None = None) -> BatchRecord | None:
+    """One batch, or None; with a part only when that part of it has come, and with that part's digest and size."""
     row = db.execute(
         f"SELECT {BATCH_COLUMNS} FROM batches WHERE run = ? AND sequence = ?", (run_id, sequence)
     ).fetchone()
-    return None if row is None else batch_from(row)
+    batch = None if row is None else batch_from(row)
+    if batch is None or part is None:
+        return batch
+    came = db.execute(
+        "SELECT digest, n_bytes FROM part_batches WHERE run = ? AND sequence = ? AND part = ?", (run_id, sequence, part)
+    ).fetchone()
+    return None if came is None else replace(batch, digest=came[0], n_bytes=came[1])

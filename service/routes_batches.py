@@ -11,6 +11,7 @@ from service.answers import Receipt, receipt
 from service.bodies import npy_body, refusals
 from service.core import Service
 from service.intake import store_batch
+from service.records import BatchRecord
 from service.times import TimesGiven, parse_number
 from service.waits import preferred_wait_seconds, wait_until
 
@@ -23,7 +24,7 @@ _BODY = npy_body(
     "NPY file, floats in C order: (n_snapshots, n_fields, n_points), (n_snapshots, n_fields * n_points) or, on a "
     "grid, (n_snapshots, n_fields, *shape)"
 )
-_REFUSALS = {
+REFUSALS = {
     **refusals(400, 404, 408, 409, 411, 413, 415, 422, 429, 503, 507),
     200: {"model": Receipt, "description": "a repeat: it was stored before"},
 }
@@ -39,7 +40,7 @@ Key = Annotated[
 ]
 
 
-@router.put("/{sequence}", status_code=201, openapi_extra=_BODY, responses=_REFUSALS)
+@router.put("/{sequence}", status_code=201, openapi_extra=_BODY, responses=REFUSALS)
 async def put_batch(
     run_id: str,
     sequence: Sequence,
@@ -56,11 +57,11 @@ async def put_batch(
 
     Batches are applied in the order of their numbers; one that comes ahead of a missing one is kept and waits.
     """
-    given = _times(start_time, time_step, time)
-    return await _answer(request, response, service, run_id, sequence, None, given, prefer)
+    given = given_times(start_time, time_step, time)
+    return await store_and_answer(request, response, service, run_id, None, sequence, None, given, prefer)
 
 
-@router.post("", status_code=201, openapi_extra=_BODY, responses=_REFUSALS)
+@router.post("", status_code=201, openapi_extra=_BODY, responses=REFUSALS)
 async def post_batch(
     run_id: str,
     request: Request,
@@ -74,11 +75,12 @@ async def post_batch(
     idempotency_key: Key = None,
 ) -> Receipt:
     """Store one batch under the next number. Without an Idempotency-Key a repeat counts as new data."""
-    given = _times(start_time, time_step, time)
-    return await _answer(request, response, service, run_id, None, idempotency_key, given, prefer)
+    given = given_times(start_time, time_step, time)
+    return await store_and_answer(request, response, service, run_id, None, None, idempotency_key, given, prefer)
 
 
-def _times(start: str | None, step: str | None, each: list[str] | None) -> TimesGiven:
+def given_times(start: str | None, step: str | None, each: list[str] | None) -> TimesGiven:
+    """The times that a query gives. Raises the 422 problem of what is no number."""
     return TimesGiven(
         tuple(parse_number("time", text) for text in each or ()),
         None if start is None else parse_number("start_time", start),
@@ -86,21 +88,22 @@ def _times(start: str | None, step: str | None, each: list[str] | None) -> Times
     )
 
 
-async def _answer(
+async def store_and_answer(
     request: Request,
     response: Response,
     service: Service,
     run_id: str,
+    part: int | None,
     sequence: int | None,
     key: str | None,
     given: TimesGiven,
     prefer: str | None,
 ) -> Receipt:
-    record, duplicate = await store_batch(request, service, run_id, sequence, key, given)
-    service.counters["batches_repeated" if duplicate else "batches_stored"] += 1
-    if not duplicate:
-        service.counters["snapshots_stored"] += record.n_snapshots
-        service.counters["bytes_stored"] += record.n_bytes
+    """Store one batch, or one part of it, and give the receipt, after it is applied if the caller prefers to wait."""
+    record, duplicate = await store_batch(request, service, run_id, part, sequence, key, given)
+    _count(service, record, duplicate, int(request.headers["content-length"]))
+    if duplicate and part is not None:
+        service.repeats.note(run_id, part)
 
     def applied() -> bool:
         through = service.board.get(run_id).applied_through
@@ -108,7 +111,16 @@ async def _answer(
         return over or (through is not None and through >= record.sequence)
 
     seconds = preferred_wait_seconds(prefer)
-    if seconds and record.first_snapshot is not None:
+    if seconds and (record.first_snapshot is not None or part is not None):
         await wait_until(service, applied, seconds)
+        record = service.reader.batch(run_id, record.sequence) or record  # the other parts may have come
     response.status_code = 200 if duplicate else 201
     return receipt(record, duplicate, service.board.get(run_id))
+
+
+def _count(service: Service, record: BatchRecord, duplicate: bool, n_bytes: int) -> None:
+    """For the metrics; the snapshots of a batch count with its last part."""
+    service.counters["batches_repeated" if duplicate else "batches_stored"] += 1
+    if not duplicate:
+        service.counters["bytes_stored"] += n_bytes
+        service.counters["snapshots_stored"] += record.n_snapshots if record.complete else 0

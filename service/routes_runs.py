@@ -18,6 +18,7 @@ from service.bodies import npy_body, refusals
 from service.commit import check_open
 from service.core import Service
 from service.intake import Body, check_capacity, check_headers, received
+from service.part_status import parts_status
 from service.problems import Problem
 from service.records import RunRecord, one
 from service.registry import add_event, find_run
@@ -143,8 +144,8 @@ def _begin_close(service: Service, run_id: str, leave_out_waiting: bool) -> None
         if waiting and not leave_out_waiting:
             raise Problem(
                 "gap-open",
-                f"{waiting} stored batches wait for batch {run.next_sequence}, which is missing; send it, or close "
-                "with leave_out_waiting=true",
+                f"{waiting} stored batches wait for batch {run.next_sequence}, which is missing"
+                f"{' or incomplete' if run.declaration.parts else ''}; send it, or close with leave_out_waiting=true",
                 missing_sequence=run.next_sequence,
                 n_waiting=waiting,
             )
@@ -234,7 +235,11 @@ def resource(service: Service, run: RunRecord) -> RunResource:
     """The run as it stands."""
     last = service.reader.batch(run.id, run.next_sequence - 1) if run.next_sequence else None
     return run_resource(
-        run, service.board.get(run.id), service.reader.backlog(run.id), None if last is None else last.last_time
+        run,
+        service.board.get(run.id),
+        service.reader.backlog(run.id),
+        None if last is None else last.last_time,
+        parts_status(service, run),
     )
 
 

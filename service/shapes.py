@@ -11,7 +11,7 @@ import numpy.typing as npt
 
 from service.npy import FLOAT_TYPES, WHOLE_TYPES, ArrayHeader
 from service.problems import Problem
-from streaming.declaration import RunDeclaration
+from streaming.declaration import Part, RunDeclaration
 from streaming.intake import accepted_shapes
 
 
@@ -32,13 +32,28 @@ class Expected:
 def expect_batch(declaration: RunDeclaration, max_snapshots: int) -> Expected:
     """A batch of snapshots."""
 
+    return _expect_snapshots(
+        declaration, accepted_shapes(declaration), Part(start=0, stop=declaration.n_points), max_snapshots
+    )
+
+
+def expect_part(declaration: RunDeclaration, part: Part, max_snapshots: int) -> Expected:
+    """A batch of the points of one part."""
+    n_fields = len(declaration.fields)
+    shapes = list(dict.fromkeys([(n_fields, part.n_points), (n_fields * part.n_points,)]))
+    return _expect_snapshots(declaration, shapes, part, max_snapshots)
+
+
+def _expect_snapshots(
+    declaration: RunDeclaration, shapes: Sequence[tuple[int, ...]], points: Part, max_snapshots: int
+) -> Expected:
     def check(header: ArrayHeader) -> None:
-        _check_batch(header, declaration, max_snapshots)
+        _check_batch(header, declaration, shapes, max_snapshots)
 
     def place(header: ArrayHeader, index: int) -> dict[str, Any]:
-        snapshot, row = divmod(index, declaration.n_rows)
-        field, point = divmod(row, declaration.n_points)
-        return {"snapshot": snapshot, "field": declaration.fields[field].name, "point": point}
+        snapshot, row = divmod(index, len(declaration.fields) * points.n_points)
+        field, point = divmod(row, points.n_points)
+        return {"snapshot": snapshot, "field": declaration.fields[field].name, "point": points.start + point}
 
     return Expected("batch", declaration.real_dtype, check, place)
 
@@ -88,14 +103,16 @@ def parse_triangles(declaration: RunDeclaration, triangles: npt.NDArray[Any]) ->
     return whole
 
 
-def _check_batch(header: ArrayHeader, declaration: RunDeclaration, max_snapshots: int) -> None:
-    wanted, shape = accepted_shapes(declaration), header.shape
+def _check_batch(
+    header: ArrayHeader, declaration: RunDeclaration, wanted: Sequence[tuple[int, ...]], max_snapshots: int
+) -> None:
+    shape = header.shape
     if len(shape) < 2 or shape[1:] not in wanted:
         texts = " or ".join(f"[n_snapshots, {', '.join(map(str, one))}]" for one in wanted)
         names = ", ".join(field.name for field in declaration.fields)
         raise Problem(
             "wrong-shape",
-            f"the batch has shape {list(shape)}; this run takes {texts}, fields in the order {names}",
+            f"the batch has shape {list(shape)}; send {texts}, fields in the order {names}",
             got=list(shape),
         )
     if shape[0] < 1:

@@ -66,8 +66,10 @@ class Shelf:
             self._registry.drop_checkpoints(self._run_id, surplus)
             for number in surplus:
                 shutil.rmtree(self._folder.checkpoint(number), ignore_errors=True)
+        parts = self._reader.run(self._run_id).declaration.parts
         for sequence in self._registry.mark_pruned(self._run_id, covered_snapshots(numbers, closed), closed):
-            self._folder.batch(sequence).unlink(missing_ok=True)
+            for path in self._folder.batch_files(sequence, len(parts) if parts else None):
+                path.unlink(missing_ok=True)
 
     def load(self, declaration: RunDeclaration) -> SnapshotStream:
         """The stream of the newest good checkpoint, or a new one. Damaged ones are set aside, not deleted."""

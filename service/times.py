@@ -11,6 +11,9 @@ import numpy.typing as npt
 from service.problems import Problem
 from streaming.declaration import RunDeclaration
 
+# Ranks that sum their time steps for themselves, or again after a restart, differ by rounding and no more.
+ROUNDING_FRACTION = 1e-9
+
 
 @dataclass(frozen=True)
 class TimesGiven:
@@ -57,6 +60,13 @@ def check_neighbours(first: float, last: float, before: float | None, after: flo
         raise Problem("wrong-times", f"the batch starts at {first}, the stored batch before it ends at {before}")
     if after is not None and not last < after:
         raise Problem("wrong-times", f"the batch ends at {last}, the stored batch after it starts at {after}")
+
+
+def same_times(one: npt.NDArray[np.float64] | None, other: npt.NDArray[np.float64] | None) -> bool:
+    """True when two parts mean the same times, or when neither gives any."""
+    if one is None or other is None:
+        return one is other
+    return len(one) == len(other) and np.allclose(one, other, rtol=ROUNDING_FRACTION, atol=0.0)
 
 
 def parse_number(name: str, text: str) -> float:

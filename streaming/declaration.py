@@ -19,6 +19,7 @@ MAX_FIELDS = 64
 MAX_RANK = 512  # the small space costs O(R^3) per block and 64 (R+16)^2 numbers in the ledger
 MAX_BLOCK_LENGTH = 4096
 MAX_LABELS = 64
+MAX_PARTS = 65536  # ranks of the largest jobs; each costs a line in the registry and a file in every batch
 
 Name = Annotated[str, StringConstraints(min_length=1, max_length=120, pattern=r"^[^\x00-\x1f\x7f]+$")]
 Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
@@ -109,6 +110,17 @@ class Reference(Model):
     speed: Positive
 
 
+class Part(Model):
+    """Points [start, stop) that one rank or device posts, in all fields."""
+
+    start: int = Field(ge=0)
+    stop: int = Field(ge=1)
+
+    @property
+    def n_points(self) -> int:
+        return self.stop - self.start
+
+
 class Criterion(Model):
     """When the modes count as settled.
 
@@ -146,6 +158,9 @@ class RunDeclaration(Model):
     scaling: Literal["none", "unit-variance"] = "none"
     retained_rank: int = Field(default=40, ge=2, le=MAX_RANK)
     block_length: int | None = Field(default=None, ge=2, le=MAX_BLOCK_LENGTH)
+    parts: list[Part] | None = Field(
+        default=None, min_length=1, max_length=MAX_PARTS, description="who posts which points; null, one posts all"
+    )
     gaps: Literal["refuse"] = "refuse"
     criterion: Criterion = Field(default_factory=Criterion)
 
@@ -163,6 +178,20 @@ class RunDeclaration(Model):
                 f"criterion.n_modes {self.criterion.n_modes} must be below the rank {self.rank} (the smaller of "
                 "retained_rank and the number of rows), so that the last wanted mode can be told from the next"
             )
+        return self
+
+    @model_validator(mode="after")
+    def _covered_by_parts(self) -> RunDeclaration:
+        expected = 0
+        for k, part in enumerate(self.parts or ()):
+            if part.start != expected or part.stop <= part.start:
+                raise ValueError(
+                    f"part {k} is [{part.start}, {part.stop}), it must start at {expected} and hold at least one "
+                    "point: parts follow one another without gap or overlap"
+                )
+            expected = part.stop
+        if self.parts and expected != self.n_points:
+            raise ValueError(f"the parts end at {expected}, n_points is {self.n_points}; they must cover all points")
         return self
 
     @property

@@ -66,15 +66,8 @@ def feed(
     """
     choice = Choice(parse_fields_or_end(variable), time, parse_axis(time_axis), without_times, one_each)
     with failures_end_with_codes(), Client(url) as client:
-        if run is None:
-            members = options.declared_members(declaration, name, campaign, modes, max_angle_deg)
-            with closing(open_data(files[0])) as first:
-                declared = complete(members, first, choice)
-            series = plan(files, choice, declared)
-            target = client.declare(declared.model_dump(mode="json"))
-        else:
-            target = client.run(run)
-            series = plan(files, choice, RunDeclaration.model_validate(target.declaration))
+        members = options.declared_members(declaration, name, campaign, modes, max_angle_deg)
+        target, series = _continued(client, run, files, choice) if run else _declared(client, members, files, choice)
         place = place_of(target)
         check_continues(series, place)
         _send_arrays(target, place, weights, positions)
@@ -90,6 +83,20 @@ def feed(
             "convergence": report,
         }
         print(json.dumps(found, indent=2) if as_json else f"{target.id}: {headline(report, target.declaration)}")
+
+
+def _declared(client: Client, members: dict[str, Any], files: list[Path], choice: Choice) -> tuple[Run, Series]:
+    """Declare the run of these files, once all of them are known to fit."""
+    with closing(open_data(files[0])) as first:
+        declaration = complete(members, first, choice)
+    series = plan(files, choice, declaration)
+    return client.declare(declaration.model_dump(mode="json")), series
+
+
+def _continued(client: Client, run_id: str, files: list[Path], choice: Choice) -> tuple[Run, Series]:
+    """Find the run that these files belong to."""
+    run = client.run(run_id)
+    return run, plan(files, choice, RunDeclaration.model_validate(run.declaration))
 
 
 def parse_fields_or_end(texts: list[str] | None) -> tuple[tuple[str | None, str], ...]:

@@ -27,6 +27,14 @@ from slackwater_client import Client, Run
 Folder = Annotated[
     Path, typer.Argument(metavar="DIR", exists=True, file_okay=False, help="Where the rig writes.", show_default=False)
 ]
+OrderOption = Annotated[
+    Order, typer.Option("--order", help="Order of the files: numbers in a name by value, or time of change.")
+]
+Settle = Annotated[float, typer.Option(min=0.0, help="Seconds without change after which a file is whole.")]
+GiveUp = Annotated[
+    float, typer.Option(min=0.0, help="Seconds without change after which an unreadable file is refused.")
+]
+Touch = Annotated[Path | None, typer.Option(metavar="FILE", help="Leave this stop file once the modes have settled.")]
 Poll = Annotated[float, typer.Option(min=0.05, help="Seconds between two looks into the folder.")]
 
 
@@ -35,13 +43,9 @@ def watch_folder(
     declaration: options.DeclarationFile = None,
     run: options.RunOption = None,
     pattern: Annotated[str, typer.Option(help="Names to take, as in a shell.")] = "*",
-    order: Annotated[Order, typer.Option(help="Order of the files: numbers in a name by value, or time of change.")] = (
-        "name"
-    ),
-    settle: Annotated[float, typer.Option(min=0.0, help="Seconds without change after which a file is whole.")] = 2.0,
-    give_up: Annotated[
-        float, typer.Option(min=0.0, help="Seconds without change after which an unreadable file is refused.")
-    ] = 60.0,
+    order: OrderOption = "name",
+    settle: Settle = 2.0,
+    give_up: GiveUp = 60.0,
     mark: Annotated[bool, typer.Option("--mark", help="Leave files there, with a NAME.posted beside them.")] = False,
     poll: Poll = 1.0,
     end_after_idle: Annotated[
@@ -50,9 +54,7 @@ def watch_folder(
     stop_when_settled: Annotated[
         bool, typer.Option("--stop-when-settled", help="End once the modes have settled; the run stays open.")
     ] = False,
-    touch: Annotated[
-        Path | None, typer.Option(metavar="FILE", help="Leave this stop file once the modes have settled.")
-    ] = None,
+    touch: Touch = None,
     variable: options.Variables = None,
     time: options.TimeVariable = None,
     time_axis: options.TimeAxis = None,
@@ -90,15 +92,20 @@ def watch_folder(
         given = client.run(run) if run is not None else None
         watcher = Watcher(folder, choice, manner, (lambda _: given) if given else declare, _tell)
         try:
-            watcher.resume(client.run)
-            if given is not None and watcher.run is not None and watcher.run.id != given.id:
-                raise FeedError(
-                    f"{folder} belongs to run {watcher.run.id} already, not to {given.id}; watch another folder, or "
-                    f"delete {watcher.list.path}"
-                )
+            _take_up(watcher, client, given)
             _watch(watcher, poll, end_after_idle, stop_when_settled, touch)
         finally:
             watcher.list.close()
+
+
+def _take_up(watcher: Watcher, client: Client, given: Run | None) -> None:
+    """Go on with the run that the folder belongs to. Raises FeedError when another one is asked for."""
+    watcher.resume(client.run)
+    if given is not None and watcher.run is not None and watcher.run.id != given.id:
+        raise FeedError(
+            f"{watcher.folder} belongs to run {watcher.run.id} already, not to {given.id}; watch another folder, or "
+            f"delete {watcher.list.path}"
+        )
 
 
 def _declared(

@@ -30,9 +30,12 @@ Variables = Annotated[
         help="Variable of a field, once for each field; or one that holds all fields.",
     ),
 ]
-TimeVariable = Annotated[str | None, typer.Option("--time", help="Variable of the times [time, t or times].")]
+TimeVariable = Annotated[
+    str | None, typer.Option("--time", help="Variable of the times (else one called time, t or times).")
+]
 TimeAxis = Annotated[
-    str | None, typer.Option(help="Axis along which snapshots follow: its number or name [that of time, or the first].")
+    str | None,
+    typer.Option(help="Axis along which snapshots follow: its number or name (else that of the times, or the first)."),
 ]
 WithoutTimes = Annotated[bool, typer.Option("--without-times", help="Leave times in the files aside.")]
 OneEach = Annotated[bool, typer.Option("--one-each", help="Each file is one snapshot, with no axis of time.")]

@@ -56,6 +56,7 @@ class Applier:
         self._trusted_from = 0 if last is None else last + 1
         self._uncovered_bytes = 0
         self._n_looks = 0
+        self._owed = False  # a look has passed whose checkpoint was too dear at the time
         self._refreshed = (0.0, 0.0)
 
     def step(self) -> bool:
@@ -115,12 +116,13 @@ class Applier:
             self._record(stream.history[-1], before.verdict)
         elif blocks:
             value = self._refresh(stream, value)
+        self._owed |= looked
         due = self._checkpoint_due(stream, looked, before.verdict, value)
         if due and before.report is not None:  # the first result is published with the checkpoint to read it from
             self._place.board.put(self.run_id, value)
         if due:
             self._shelf.save(stream)
-            self._uncovered_bytes = 0
+            self._uncovered_bytes, self._owed = 0, False
             self._shelf.tidy(closed=False)
         self._place.board.put(self.run_id, value)
 
@@ -152,7 +154,7 @@ class Applier:
         if stream.n_applied != stream.n_snapshots:
             return False
         progress = Progress(
-            looked=looked,
+            owed=self._owed,
             turned_settled=looked and value.verdict is State.SETTLED and before is not State.SETTLED,
             n_checkpoints=len(self._shelf.numbers),
             seconds_since_last=time.monotonic() - self._shelf.last_end,

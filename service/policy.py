@@ -14,9 +14,12 @@ JOURNAL_SHARE = 0.25
 
 @dataclass(frozen=True)
 class Progress:
-    """What the worker knows when a block has just been applied; never inside a block, so that none is split."""
+    """What the worker knows when a block has just been applied; never inside a block, so that none is split.
 
-    looked: bool
+    ``owed``: there was a look since the last checkpoint.
+    """
+
+    owed: bool
     turned_settled: bool
     n_checkpoints: int
     seconds_since_last: float
@@ -33,7 +36,7 @@ def checkpoint_due(progress: Progress, share: float, max_journal_bytes: int) -> 
         return True
     if progress.uncovered_bytes >= JOURNAL_SHARE * max_journal_bytes:
         return True
-    return progress.looked and progress.last_cost_seconds <= share * progress.seconds_since_last
+    return progress.owed and progress.last_cost_seconds <= share * progress.seconds_since_last
 
 
 def surplus_checkpoints(numbers: Sequence[int], max_kept: int) -> list[int]:

@@ -23,7 +23,7 @@ from scipy.stats import f as f_distribution
 Array = npt.NDArray[np.float64]
 
 ALARM_LEVEL = 0.001
-MEMORY_BLOCKS = 32  # of the residual's moments: the basis improves, so old residuals say little of new ones
+MEMORY_BLOCKS = 16  # of the residual's moments: the basis improves, so old residuals say little of new ones
 MIN_BLOCKS = 4  # until then there is no limit
 COLUMNS = ("outside", "outside_limit", "hotelling", "hotelling_limit")
 

@@ -14,7 +14,7 @@ from streaming.assessment import Assessment, Context, assess, report
 from streaming.basis import EvolvingBasis
 from streaming.checkpoint import read_state, save_checkpoint
 from streaming.declaration import RunDeclaration
-from streaming.errors import ClosedError, DeclarationError, NotReadyError
+from streaming.errors import CheckpointError, ClosedError, DeclarationError, NotReadyError
 from streaming.grid import point_positions
 from streaming.intake import count_repeats, parse_positions, parse_snapshots, parse_times, parse_weights
 from streaming.ledger import Ledger, first_span
@@ -169,7 +169,9 @@ class SnapshotStream:
             self._ledger.carry(block.carried)
             self._ledger.add(block.coordinates, block.probed, block.energies, times)
         novelty = self._watch.judge(block.foreseen, block.energies)
-        self._watch = self._watch.learnt(novelty[:, 0]).carried(block.carried)
+        if block.foreseen.shape[1]:  # before there is a basis, all of a snapshot lies outside it
+            self._watch = self._watch.learnt(novelty[:, 0])
+        self._watch = self._watch.carried(block.carried)
         self._record.append(times, block.coordinates, block.carried, novelty)
         self.n_waiting, self._times, self.applied_time = 0, [], float(times[-1])
         if self._plan.due(self.n_applied):
@@ -310,7 +312,10 @@ class SnapshotStream:
         attributes, arrays = read_state(Path(path))
         declaration = RunDeclaration.model_validate_json(attributes["declaration"])
         stream = cls(declaration, None, arrays.get("positions"), record_path)
-        stream._restore(attributes, arrays)
+        try:
+            stream._restore(attributes, arrays)
+        except KeyError as error:
+            raise CheckpointError(f"{path} has no {error}: it was written by another version; start over") from error
         return stream
 
     def export(self) -> tuple[dict[str, Any], dict[str, npt.NDArray[Any]]]:

@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 from service.policy import Progress, checkpoint_due, covered_snapshots, surplus_checkpoints
 
 QUIET = Progress(
-    looked=False,
+    owed=False,
     turned_settled=False,
     n_checkpoints=2,
     seconds_since_last=10.0,
@@ -25,8 +25,8 @@ QUIET = Progress(
     ("change", "due"),
     [
         ({}, False),
-        ({"looked": True}, False),  # a second in ten is more than the share
-        ({"looked": True, "last_cost_seconds": 0.4}, True),
+        ({"owed": True}, False),  # a second in ten is more than the share
+        ({"owed": True, "last_cost_seconds": 0.4}, True),
         ({"last_cost_seconds": 0.4}, False),
         ({"turned_settled": True}, True),
         ({"n_checkpoints": 0}, True),

@@ -37,7 +37,7 @@ def test_false_alarms_come_at_their_stated_rate(learnt: SnapshotStream) -> None:
 
 def test_nothing_is_known_at_first(learnt: SnapshotStream) -> None:
     _, rows = learnt.novelty()
-    assert np.isnan(rows[:16, OUTSIDE_LIMIT]).all()
+    assert np.isnan(rows[:80, OUTSIDE_LIMIT]).all()
     assert np.isnan(rows[:16, DISTANCE]).all()
     assert np.isfinite(rows[200:]).all()
 
@@ -57,6 +57,14 @@ def test_a_change_shows_within_one_block(learnt: SnapshotStream, name: str, colu
     _, rows = learnt.novelty()
     last = rows[-16:]
     assert (last[:, column] > last[:, column + 1]).mean() > 0.3
+
+
+def test_a_limit_after_ten_blocks_is_of_use(make_stream: MakeStream) -> None:
+    """The first block, which the empty basis does not foresee at all, must not count as usual."""
+    stream = make_stream(80, retained_rank=8, criterion={"n_modes": 3})
+    stream.absorb(regime(160))
+    _, rows = stream.novelty()
+    assert rows[-1, OUTSIDE_LIMIT] < 2.5 * np.median(rows[-16:, OUTSIDE])
 
 
 def test_an_alarm_does_not_teach_the_limit(learnt: SnapshotStream) -> None:

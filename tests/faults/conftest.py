@@ -1,0 +1,46 @@
+"""One shim, one nursery and one seed for the campaign; what was injected is printed at the end."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator
+from pathlib import Path
+
+import pytest
+
+from tests.faults.forked import Nursery
+from tests.faults.shim import compile_shim
+
+# The bounded form takes minutes; with SLACKWATER_FAULTS=all every call is hit.
+EVERYTHING = os.environ.get("SLACKWATER_FAULTS") == "all"
+SEED = int(os.environ.get("SLACKWATER_FAULTS_SEED", "20"))
+
+N_AT_ONCE = 2
+
+_counts: list[str] = []
+
+
+def report(line: str) -> None:
+    """A line for the summary of the campaign."""
+    _counts.append(line)
+
+
+def pytest_terminal_summary(terminalreporter: pytest.TerminalReporter) -> None:
+    if _counts:
+        terminalreporter.section(f"faults injected (seed {SEED})")
+        for line in _counts:
+            terminalreporter.write_line(line)
+
+
+@pytest.fixture(scope="session")
+def shim(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    return compile_shim(tmp_path_factory.mktemp("shim"))
+
+
+@pytest.fixture(scope="session")
+def nurseries(shim: Path, tmp_path_factory: pytest.TempPathFactory) -> Iterator[list[Nursery]]:
+    """One for each service that runs at a time."""
+    nurseries = [Nursery(shim, tmp_path_factory.mktemp("nursery")) for _ in range(N_AT_ONCE)]
+    yield nurseries
+    for nursery in nurseries:
+        nursery.close()

@@ -28,6 +28,7 @@ from slackwater_client.errors import (
     UnsentWarning,
 )
 from slackwater_client.hook import Hook
+from slackwater_client.part import RunPart
 from slackwater_client.run import Run
 
 __all__ = [
@@ -46,6 +47,7 @@ __all__ = [
     "Receipt",
     "RefusedError",
     "Run",
+    "RunPart",
     "SlackwaterError",
     "SnapshotsToGo",
     "State",

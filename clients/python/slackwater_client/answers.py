@@ -33,6 +33,7 @@ class Receipt:
     first_snapshot : number of its first snapshot in the run; None while an earlier batch is missing
     n_snapshots : snapshots in it
     duplicate : True when the service had it already; it counts once
+    complete : True when all parts of the batch are there; always so in a run without parts
     applied_through : number of the last batch that the engine has taken in, or None before the first
     verdict : state of the run at the moment of the receipt
     advice : "continue", or "may stop" once the modes have settled
@@ -47,6 +48,7 @@ class Receipt:
     verdict: State
     advice: Advice
     snapshots_to_go: SnapshotsToGo | None
+    complete: bool = True
 
 
 class Reason(TypedDict):
@@ -118,6 +120,7 @@ def parse_receipt(answer: Mapping[str, Any]) -> Receipt:
         verdict=cast(State, answer["verdict"]),
         advice="may stop" if answer.get("advice") == "may stop" else "continue",
         snapshots_to_go=_parse_to_go(answer.get("snapshots_to_go")),
+        complete=bool(answer.get("complete", True)),
     )
 
 

@@ -15,6 +15,7 @@ from slackwater_client.errors import SlackwaterError, UnsentError, UnsentWarning
 from slackwater_client.outbox import Batch, Outbox, log
 
 if TYPE_CHECKING:
+    from slackwater_client.part import RunPart
     from slackwater_client.run import Run
 
 Fields = npt.ArrayLike | Sequence[npt.ArrayLike] | Mapping[str, npt.ArrayLike]
@@ -60,14 +61,18 @@ class Hook:
 
     Notes
     -----
-    With several ranks, call the hook on one rank with the gathered fields and broadcast its advice, so that
-    all ranks stop at the same step. The advice is for a simulation to end itself by and for people to read:
-    never wire it to an interlock, nor let it drive a rig.
+    With several ranks, call the hook on one rank with the gathered fields; or, in a run declared with parts, one
+    hook on each rank with the fields of its own points (``run.part(rank).hook()``, the same ``every`` and ``batch``
+    on all). Either way broadcast the advice of one rank, so that all stop at the same step. A part sends nothing more
+    after a batch of it was lost, since its later rows would stand beside other times than those of the other parts.
+
+    The advice is for a simulation to end itself by and for people to read: never wire it to an interlock, nor let it
+    drive a rig.
     """
 
     def __init__(
         self,
-        run: Run,
+        run: Run | RunPart,
         *,
         every: int = 1,
         batch: int = 8,
@@ -86,17 +91,19 @@ class Hook:
         self._names = [str(field["name"]) for field in declaration["fields"]]
         self._n_points = int(declaration["n_points"])
         self._dtype = np.dtype(str(declaration.get("dtype", "float32")))
-        self._buffer = self._new_buffer()
+        stored = _stored(run)
+        self._resume_after = _last_time(stored)
+        self._buffer = self._new_buffer(_first_length(stored) or batch)
         self._times: list[float] = []
         self._filled = 0
         self._closed = False
-        self._resume_after = _last_time(run)
         self.skipped_snapshots = 0
         self._outbox = Outbox(
             lambda ready, sequence: run.post(ready.snapshots, sequence, ready.times),
             lambda: run.next_sequence,
             max_waiting_bytes,
             patience_seconds,
+            run.stops_at_loss,
         )
 
     def __call__(self, step: int, time: float | None, fields: Fields) -> Advice:
@@ -118,7 +125,7 @@ class Hook:
             raise ValueError("the hook was closed; make a new one with run.hook()")
         if step % self._every == 0 and not self._is_known(time):
             self._take(time, fields)
-            if self._filled == self._batch:
+            if self._filled == len(self._buffer):
                 self._hand_over()
         if self._raise_errors and (self._outbox.out_of_patience or self._outbox.lost_snapshots):
             raise UnsentError(self._account())
@@ -207,10 +214,10 @@ class Hook:
         """Give the buffered snapshots to the outbox and start a new buffer."""
         times = tuple(self._times) if self._times else None
         self._outbox.offer(Batch(self._buffer[: self._filled], times), self._hold_seconds)
-        self._buffer, self._times, self._filled = self._new_buffer(), [], 0
+        self._buffer, self._times, self._filled = self._new_buffer(self._batch), [], 0
 
-    def _new_buffer(self) -> npt.NDArray[Any]:
-        return np.empty((self._batch, len(self._names), self._n_points), dtype=self._dtype)
+    def _new_buffer(self, n_snapshots: int) -> npt.NDArray[Any]:
+        return np.empty((n_snapshots, len(self._names), self._n_points), dtype=self._dtype)
 
     def _account(self) -> str:
         outbox = self._outbox
@@ -220,15 +227,26 @@ class Hook:
         )
 
 
-def _last_time(run: Run) -> float | None:
-    """Time up to which the run holds snapshots, just above the last one; None when unknown or empty."""
+def _stored(run: Run | RunPart) -> Mapping[str, Any]:
+    """Where the run, or the part of it, stands; empty when that cannot be known now."""
     try:
-        last = run.refresh().get("last_time")
+        return run.refresh()
     except SlackwaterError as error:
         log.warning("the hook starts without knowing where the run stands: %s", error)
-        return None
+        return {}
+
+
+def _last_time(stored: Mapping[str, Any]) -> float | None:
+    """Time up to which the run holds snapshots, just above the last one; None when unknown or empty."""
+    last = stored.get("last_time")
     # a restarted solver may reach the same time with other rounding
     return None if last is None else float(last) + RESUME_MARGIN_FRACTION * abs(float(last))
+
+
+def _first_length(stored: Mapping[str, Any]) -> int | None:
+    """Snapshots of the next batch when other parts have sent theirs, as before a restart; None when free."""
+    expected = stored.get("expected_snapshots")
+    return None if expected is None else int(expected)
 
 
 def _copy(values: npt.ArrayLike, target: npt.NDArray[Any]) -> None:

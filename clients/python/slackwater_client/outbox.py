@@ -1,7 +1,8 @@
 """The background half of a hook: a bounded queue in memory and the thread that empties it.
 
 Batches are numbered when they are sent, so a batch that the service refuses leaves no gap in the numbers. A
-batch whose fate is unknown is sent again under its number until the service answers.
+batch whose fate is unknown is sent again under its number until the service answers. One part of a run among several
+cannot close up like this, since its batches must stay beside those of the other parts: it stops at the first loss.
 """
 
 from __future__ import annotations
@@ -43,11 +44,11 @@ class Next(Enum):
     STOP = "send nothing more"
 
 
-def after_failure(error: SlackwaterError) -> Next:
+def after_failure(error: SlackwaterError, stops_at_loss: bool = False) -> Next:
     """Decide what a failed try means."""
     if may_pass(error):
         return Next.AGAIN
-    return Next.SKIP if isinstance(error, InvalidError) else Next.STOP
+    return Next.SKIP if isinstance(error, InvalidError) and not stops_at_loss else Next.STOP
 
 
 class Outbox:
@@ -59,6 +60,7 @@ class Outbox:
     first_sequence : asks the service for the first number
     max_waiting_bytes : bound on the snapshots that wait in memory, the one being sent included
     patience_seconds : how long without contact until `out_of_patience`; tries go on after it
+    stops_at_loss : send nothing more once a batch was refused or found no room
     """
 
     def __init__(
@@ -67,10 +69,13 @@ class Outbox:
         first_sequence: Callable[[], int],
         max_waiting_bytes: int,
         patience_seconds: float,
+        stops_at_loss: bool = False,
     ) -> None:
         self._post, self._first_sequence = post, first_sequence
         self._max_waiting_bytes = max_waiting_bytes
         self._patience_seconds = patience_seconds
+        self._stops_at_loss = stops_at_loss
+        self._shut = False  # after a loss that nothing may follow
         self._waiting: deque[Batch] = deque()
         self._waiting_bytes = 0
         self._changed = threading.Condition()
@@ -103,14 +108,23 @@ class Outbox:
     def offer(self, batch: Batch, hold_seconds: float) -> bool:
         """Queue a batch; False, and the batch is lost, when there is no room within ``hold_seconds``."""
         with self._changed:
-            room = self._changed.wait_for(lambda: self.stopped or self._has_room(batch), hold_seconds)
+            room = not self._shut and self._changed.wait_for(
+                lambda: self.stopped or self._has_room(batch), hold_seconds
+            )
             if self.stopped or not room:
-                self.lost_snapshots += len(batch)
+                self._lose(batch)
                 return False
             self._waiting.append(batch)
             self._waiting_bytes += batch.snapshots.nbytes
             self._changed.notify_all()
             return True
+
+    def _lose(self, batch: Batch) -> None:
+        """Count a batch that found no room; what waits before it is still sent."""
+        self.lost_snapshots += len(batch)
+        if self._stops_at_loss and not self._shut:
+            self._shut = True
+            log.warning("no room for a batch of %d snapshots; nothing is sent after what waits now", len(batch))
 
     def finish(self, flush_seconds: float) -> None:
         """Wait until all is sent, for at most ``flush_seconds``, and end the thread."""
@@ -160,7 +174,7 @@ class Outbox:
     def _failed(self, batch: Batch, error: SlackwaterError, attempt: int) -> int:
         """Act on a failed try and give the number of the next one."""
         self.last_error = error
-        step = after_failure(error)
+        step = after_failure(error, self._stops_at_loss)
         if step is Next.STOP:
             log.warning("nothing more is sent: %s", error)
             self._stop(error)

@@ -14,6 +14,7 @@ import numpy.typing as npt
 
 from slackwater_client.answers import ConvergenceReport, Receipt, parse_receipt
 from slackwater_client.npy import NpyBody
+from slackwater_client.part import RunPart
 from slackwater_client.patience import with_patience
 from slackwater_client.transport import Parameters, Transport
 
@@ -33,6 +34,8 @@ class Run:
 
     Every method may raise `UnreachableError` (no answer) and `AccessError` (token) beside what it names.
     """
+
+    stops_at_loss = False  # a hook leaves out a batch that is refused, and goes on with the next
 
     def __init__(self, transport: Transport, resource: Mapping[str, Any]) -> None:
         self._transport = transport
@@ -128,6 +131,43 @@ class Run:
             lambda: self._transport.send_array(method, path, body, params, headers), patience_seconds
         )
         return parse_receipt(answer)
+
+    def part(self, number: int) -> RunPart:
+        """Part ``number`` of a run that was declared with parts, counted from 0; ValueError when there is none."""
+        return RunPart(self, number)
+
+    def post_part(
+        self,
+        part: int,
+        snapshots: npt.ArrayLike,
+        sequence: int,
+        times: npt.ArrayLike | None = None,
+        *,
+        patience_seconds: float = 0.0,
+    ) -> Receipt:
+        """Post what one part has of a batch and wait for its receipt; see `post` for what is not said here.
+
+        A batch is applied when all its parts are there, in whatever order they came; ``complete`` of the receipt says
+        whether they are. All parts of a batch hold the same number of snapshots, with the same times.
+
+        Parameters
+        ----------
+        part : number of the part as declared, from 0
+        snapshots : (n, n_fields, stop - start) or (n, n_fields * (stop - start))
+
+        Raises
+        ------
+        ConflictError : other snapshots of this part have this number, or the other parts of it differ in number of
+            snapshots or in times; or the run is closed
+        """
+        body, params = NpyBody(snapshots), _time_parameters(times)
+        path = f"{self._path}/parts/{int(part)}/batches/{int(sequence)}"
+        answer = with_patience(lambda: self._transport.send_array("PUT", path, body, params, {}), patience_seconds)
+        return parse_receipt(answer)
+
+    def read_part(self, part: int) -> dict[str, Any]:
+        """How far one part has come: its next number, and how many of its batches wait for other parts."""
+        return dict(self._transport.json("GET", f"{self._path}/parts/{int(part)}"))
 
     def convergence(self) -> ConvergenceReport:
         """The latest numbers and the verdict."""

@@ -63,19 +63,15 @@ def sync_directory(folder: Path, poison: Poison) -> None:
         os.close(descriptor)
 
 
-def storage_problem(error: OSError) -> Problem:
-    """What to tell a client whose body could not be written (before anything was promised)."""
+def storage_problem(error: OSError, left: str = "nothing of it was stored") -> Problem:
+    """What to tell a client whose body could not be written (before anything was promised); ``left`` of it is there."""
     if error.errno in NO_SPACE:
         return Problem(
             "disk-full",
-            "the disk filled up while the body was written; nothing of it was stored",
+            f"the disk filled up while the body was written; {left}",
             retry_after_seconds=RETRY_STORAGE_SECONDS,
         )
-    return Problem(
-        "stopping",
-        "the body could not be written; nothing of it was stored",
-        retry_after_seconds=RETRY_STORAGE_SECONDS,
-    )
+    return Problem("stopping", f"the body could not be written; {left}", retry_after_seconds=RETRY_STORAGE_SECONDS)
 
 
 def check_free_space(folder: Path, coming_bytes: int, min_free_bytes: int) -> None:

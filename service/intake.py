@@ -110,7 +110,10 @@ async def received(
     service.incoming_bytes += n_bytes
     draft = None
     try:
-        draft = Draft(service.folders.run(run.id).journal, n_bytes, expected, service.poison)
+        folder = service.folders.run(run.id)
+        if not folder.journal.is_dir():  # the disk was full when the run was declared
+            folder.create(service.poison)
+        draft = Draft(folder.journal, n_bytes, expected, service.poison)
         await _pour(request, service, draft)
         header, digest = draft.digest()
         if wanted is not None and wanted != digest:

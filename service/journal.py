@@ -8,6 +8,7 @@ registry has been acknowledged, or may have been; a file the registry does not k
 from __future__ import annotations
 
 import hashlib
+import logging
 import os
 import threading
 import uuid
@@ -25,6 +26,8 @@ from service.problems import Problem
 from service.records import BatchRecord, PartBatch
 from service.shapes import Expected
 from streaming.declaration import RunDeclaration
+
+logger = logging.getLogger("slackwater")
 
 DRAFT_SUFFIX = ".part"
 
@@ -45,6 +48,7 @@ class Draft:
         self._n_bytes, self._expected, self._poison = n_bytes, expected, poison
         self._file = self.path.open("xb", buffering=0)
         self._lock = threading.Lock()
+        self._kept = False
         self._hash = hashlib.sha256()
         self._rest = b""  # bytes of the header so far, then of a value cut by the end of a piece
         self._n_values = 0
@@ -111,13 +115,22 @@ class Draft:
     def keep(self, path: Path) -> None:
         """Rename to the final name, durably. Raises OSError or the 503 problem."""
         os.replace(self.path, path)
+        self._kept = True
         sync_directory(path.parent, self._poison)
 
     def discard(self) -> None:
-        """Leave nothing behind; harmless after `keep`."""
+        """Leave nothing behind; harmless after `keep`.
+
+        A draft that cannot be removed must not turn a receipt into an error; the next start removes it.
+        """
         with self._lock:
             self._file.close()
-        self.path.unlink(missing_ok=True)
+        if self._kept:
+            return
+        try:
+            self.path.unlink(missing_ok=True)
+        except OSError as error:
+            logger.warning("the draft %s could not be removed: %s", self.path, error)
 
 
 def _not_finite(expected: Expected, header: ArrayHeader, index: int, value: float) -> Problem:

@@ -17,6 +17,7 @@ from service.answers import RunChange, RunList, RunResource, run_resource
 from service.bodies import npy_body, refusals
 from service.commit import check_open
 from service.core import Service
+from service.durable import storage_problem
 from service.intake import Body, check_capacity, check_headers, received
 from service.part_status import parts_status
 from service.problems import Problem
@@ -53,9 +54,13 @@ def declare_run(
     _check_names(declaration)
     run_id = _new_id(declaration.name, idempotency_key)
     response.headers["Location"] = f"/v1/runs/{run_id}"
-    # The folder comes second: after a crash in between, the next start makes it.
+    # The folder comes second: after a crash in between, the next start makes it, and after an error the first body.
     run = service.registry.add_run(run_id, declaration.model_dump_json(), service.settings.max_runs)
-    service.folders.run(run_id).create(service.poison)
+    try:
+        service.folders.run(run_id).create(service.poison)
+    except OSError as error:
+        left = f"run {run_id} is declared all the same: declare it again with its Idempotency-Key, or delete it"
+        raise storage_problem(error, left) from error
     return resource(service, run)
 
 

@@ -138,11 +138,11 @@ def truncation_sine(modal: ModalMoments, group: tuple[int, int]) -> float:
     """Sine of the angle by which streaming has bent a group, seen by the probes.
 
     Largest singular value of the residuals (C_wc u_k - Omega U' C_cc u_k) / p^(1/2) of the group's modes, each over the
-    gap to the directions just dropped; these have about the energy of the last retained mode.
+    gap to what was dropped; that lies between nothing and the energy of the last retained mode, so half of it is taken.
     """
     start, stop = group
     inside = np.maximum(modal.eigenvalues[start:stop, None], _TINY)
-    gaps = np.maximum(inside - modal.eigenvalues[-1], LEAST_GAP * inside)
+    gaps = np.maximum(inside - 0.5 * modal.eigenvalues[-1], LEAST_GAP * inside)
     return float(np.linalg.norm(modal.residuals[start:stop] / gaps, 2))
 
 

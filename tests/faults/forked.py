@@ -20,6 +20,7 @@ from tests.faults.shim import Control
 
 ROOT = Path(__file__).parents[2]
 END_SECONDS = 20.0
+LOG_SHOWN = 2500  # characters of the end of a log beside a failure
 # A checkpoint at every block, so that a short record holds several.
 SETTINGS = {"SLACKWATER_MAX_JOURNAL_BYTES": "1024", "SLACKWATER_MIN_FREE_BYTES": "0"}
 
@@ -155,7 +156,10 @@ class Forked:
     def __enter__(self) -> Self:
         return self
 
-    def __exit__(self, *_: object) -> None:
+    def __exit__(self, _: object, error: BaseException | None, __: object) -> None:
+        if error is not None:
+            hit = None if self.control is None else self.control.hit
+            error.add_note(f"hit: {hit}; log: {self.log[-LOG_SHOWN:]}")
         if self._exit is None:
             self.end(signal.SIGKILL)
         self._log.unlink(missing_ok=True)

@@ -20,6 +20,7 @@ from tests.faults.shim import Call, Control
 
 Point = TypeVar("Point")
 Found = TypeVar("Found")
+MAX_TOLD = 20
 MEMORY = Path("/dev/shm")  # a killed process loses nothing of what it wrote, wherever that was; here a sync is free
 
 
@@ -60,20 +61,20 @@ def undisturbed_run(nursery: Nursery, waiting: bool) -> Undisturbed:
     return _undisturbed[waiting]
 
 
-def draw(calls: Iterable[Call], shares: Mapping[str, int] | None, rng: np.random.Generator) -> list[int]:
-    """Numbers of calls, from 1: so many of each place, or all without shares."""
+def draw(calls: Iterable[Call], shares: Mapping[str, int], factor: int, rng: np.random.Generator) -> list[int]:
+    """Numbers of calls, from 1: so many of each place, times the factor."""
     by_place: dict[str, list[int]] = defaultdict(list)
     for number, call in enumerate(calls, 1):
         by_place[call.place].append(number)
     drawn: list[int] = []
     for place, numbers in sorted(by_place.items()):
-        n = len(numbers) if shares is None else min(shares.get(place, 0), len(numbers))
+        n = min(factor * shares[place], len(numbers))
         drawn += [int(k) for k in rng.choice(numbers, n, replace=False)]
     return sorted(drawn)
 
 
 def at_all(nurseries: list[Nursery], points: list[Point], hit: Callable[[Nursery, Point], Found]) -> list[Found]:
-    """Hit every point, as many at a time as there are nurseries; a failure names its point."""
+    """Hit every point, as many at a time as there are nurseries. All are hit; then the failures are told, by point."""
     free: SimpleQueue[Nursery] = SimpleQueue()
     for nursery in nurseries:
         free.put(nursery)
@@ -82,15 +83,15 @@ def at_all(nurseries: list[Nursery], points: list[Point], hit: Callable[[Nursery
         nursery = free.get()
         try:
             return hit(nursery, point)
-        except BaseException as error:
-            error.add_note(f"at {point}")
-            raise
         finally:
             free.put(nursery)
 
     with ThreadPoolExecutor(len(nurseries)) as pool:
         results = [pool.submit(one, point) for point in points]
-        return [result.result() for result in results]
+    errors = [(point, error) for point, result in zip(points, results, strict=True) if (error := result.exception())]
+    told = [f"{point}: {error!r}\n" + "\n".join(getattr(error, "__notes__", [])) for point, error in errors]
+    assert not errors, f"{len(errors)} of {len(points)} points failed:\n" + "\n\n".join(told[:MAX_TOLD])
+    return [result.result() for result in results]
 
 
 def summary(counts: Counter[str]) -> str:

@@ -9,13 +9,13 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from tests.faults.conftest import EVERYTHING, SEED, report
+from tests.faults.conftest import FACTOR, SECONDS, SEED, report
 from tests.faults.forked import Nursery
 from tests.faults.points import at_all, draw, scratch, summary, undisturbed_run
 from tests.faults.scenario import Journal, check_kept, check_registry, check_result, finish, play, tree
 from tests.faults.shim import Call, Control, Kind
 
-pytestmark = [pytest.mark.campaign, pytest.mark.timeout(3600 if EVERYTHING else 900)]
+pytestmark = [pytest.mark.campaign, pytest.mark.timeout(SECONDS)]
 
 # Checkpoints make nine calls in ten, and are all of one kind; the rest is where receipts come from.
 SHARES = {"registry": 12, "journal": 14, "checkpoint": 10, "record": 2, "folders": 4}
@@ -36,7 +36,7 @@ class CrashPoint:
 
 def points(waiting: bool, calls: list[Call]) -> list[CrashPoint]:
     rng = np.random.default_rng((SEED, waiting))
-    chosen = draw(calls, None if EVERYTHING else SHARES, rng)
+    chosen = draw(calls, SHARES, FACTOR, rng)
     return [
         CrashPoint(
             waiting,

@@ -30,7 +30,6 @@ from streaming.basis import memory_needed_bytes
 from streaming.declaration import RunDeclaration
 from streaming.errors import DeclarationError
 from streaming.intake import parse_positions, parse_weights
-from streaming.probes import N_PROBES
 
 router = APIRouter(prefix="/v1/runs", tags=["runs"])
 
@@ -253,8 +252,8 @@ def _check_memory(declaration: RunDeclaration, limit_bytes: int) -> None:
     if needed > limit_bytes:
         raise Problem(
             "run-too-large",
-            f"(rank {declaration.rank} + block {declaration.length_of_block} + {N_PROBES} probes) x "
-            f"{declaration.n_rows} rows need {needed} bytes of memory, {limit_bytes} are allowed for a run; lower "
+            f"{declaration.n_rows} rows at rank {declaration.rank} in blocks of {declaration.length_of_block} need "
+            f"{needed} bytes of memory, {limit_bytes} are allowed for a run; lower "
             "retained_rank or block_length, use float32, or raise the setting memory_bytes",
             needed_bytes=needed,
             limit=limit_bytes,

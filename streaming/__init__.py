@@ -1,5 +1,9 @@
 """Streaming POD of unsteady flows: an evolving basis, and a verdict on whether its leading modes have settled."""
 
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
 from streaming.declaration import Criterion, RunDeclaration
 from streaming.errors import (
     CheckpointError,
@@ -10,7 +14,9 @@ from streaming.errors import (
     StreamError,
 )
 from streaming.report import Convergence, State
-from streaming.stream import SnapshotStream
+
+if TYPE_CHECKING:
+    from streaming.stream import SnapshotStream
 
 __all__ = [
     "CheckpointError",
@@ -25,3 +31,12 @@ __all__ = [
     "State",
     "StreamError",
 ]
+
+
+def __getattr__(name: str) -> Any:
+    """Import the engine when it is first asked for: commands that only declare or wait start without it."""
+    if name == "SnapshotStream":
+        from streaming.stream import SnapshotStream
+
+        return SnapshotStream
+    raise AttributeError(f"module {__name__!r} has no attribute {name!r}")

@@ -10,7 +10,6 @@ from rich.console import Console
 
 from service.demo.duct import BAR_HEIGHT_M, FIXED_PLAN_SNAPSHOTS, REYNOLDS, SPEED_M_S
 from service.folders import Folders
-from service.pictures import mean_png, mode_png
 from service.verdict_text import groups_table, headline, max_angle_of, modes_table
 from slackwater_client import ConvergenceReport, Run
 from streaming.declaration import RunDeclaration
@@ -46,6 +45,8 @@ def gather(run: Run, data_directory: Path, picture_directory: Path) -> Findings:
 def draw(run: Run, declaration: RunDeclaration, directory: Path) -> list[Path]:
     """Write one picture for each field of the mean and of each wanted mode."""
     directory.mkdir(exist_ok=True)
+    from service.pictures import mean_png, mode_png  # late: the drawing library takes a second to import
+
     pictures: dict[str, bytes] = {}
     mean, modes = run.mean(), run.modes(declaration.criterion.n_modes)
     for k, field in enumerate(declaration.fields):

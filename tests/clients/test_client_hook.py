@@ -150,7 +150,7 @@ def test_a_frozen_service_does_not_hold_the_solver_up(
     mortal_service: Service, declaration: dict[str, Any], make_snapshots: Make
 ) -> None:
     snapshots = make_snapshots(80)
-    with Client(mortal_service.url, timeout=1.0) as client:
+    with Client(mortal_service.url, timeout=10.0) as client:
         run = client.declare(declaration)
         with run.hook(batch=8) as hook:
             mortal_service.freeze()

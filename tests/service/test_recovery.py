@@ -229,7 +229,7 @@ def test_sigterm_under_load_loses_nothing(tmp_path: Path) -> None:
 
 def test_runs_that_rest_give_way_and_come_back(tmp_path: Path) -> None:
     """Memory for one run only: two runs in turn reach the bits of runs that had it to themselves."""
-    points = 3000  # two fields, 34 rows of working memory, 4 bytes: 0.8 MB of the 1 MiB there is
+    points = 2000  # two fields, 53 rows of 4 bytes and one of 8: 0.9 MB of the 1 MiB there is
     wide = {"n_points": points, "grid": {"kind": "none"}}
     rows = np.random.default_rng(3).standard_normal((2, 60, 2, points)).astype(np.float32)
     with RunningService(tmp_path / "data", environment={"SLACKWATER_MEMORY_BYTES": str(2**20)}) as service:

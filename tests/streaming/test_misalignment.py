@@ -70,6 +70,7 @@ def test_oversampling_adds_no_samples() -> None:
     assert np.mean(found) == pytest.approx(n * (1 - keep**2) / (1 + keep**2), rel=0.2)
 
 
+@pytest.mark.campaign
 def test_coverage_with_the_digits_as_the_population() -> None:
     """Records drawn from the 1797 images of `sklearn.datasets.load_digits`, whose modes are then the truth."""
     images = load_digits().data

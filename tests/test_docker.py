@@ -10,7 +10,8 @@ import yaml
 from service.settings import Settings
 
 ROOT = Path(__file__).parents[1]
-INSTRUCTIONS = set(["FROM", "RUN", "WORKDIR", "COPY", "USER", "VOLUME", "EXPOSE", "ENV", "HEALTHCHECK", "STOPSIGNAL", "ENTRYPOINT"])
+INSTRUCTIONS = {"FROM", "RUN", "WORKDIR", "COPY", "USER", "VOLUME", "EXPOSE", "ENV"}
+INSTRUCTIONS |= {"HEALTHCHECK", "STOPSIGNAL", "ENTRYPOINT"}
 
 
 def instructions() -> list[tuple[str, str]]:

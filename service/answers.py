@@ -11,7 +11,7 @@ from streaming.report import Convergence, Reason, State, Stationarity, Verdict
 
 
 class Waiting(Model):
-    """Batches stored ahead of one that is missing; they are applied once it has come."""
+    """Batches stored ahead of one that is missing or lacks parts; they are applied once it is whole."""
 
     missing_sequence: int
     n_batches: int
@@ -63,7 +63,7 @@ class RunResource(Model):
     reason: str | None = Field(description="why it failed")
     created: str
     declaration: RunDeclaration
-    next_sequence: int = Field(description="sequence number of the first batch that is not stored")
+    next_sequence: int = Field(description="sequence number of the first batch that is not stored, or lacks parts")
     n_snapshots: int = Field(description="snapshots stored without a gap")
     n_applied: int = Field(description="snapshots in the basis")
     applied_through: int | None = Field(description="last batch that the engine has taken")

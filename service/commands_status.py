@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Mapping
 from typing import Annotated, Any
 
 import typer
@@ -28,6 +29,7 @@ from slackwater_client import Client, ConvergenceReport, Run
 
 # Each run costs a request, and no terminal shows more at once.
 MAX_LISTED_RUNS = 100
+MAX_NAMED_PARTS = 8  # fits a line
 PLAIN_WIDTH = 160
 
 
@@ -108,8 +110,23 @@ def _detail(run: Run, report: ConvergenceReport) -> Group:
     ]
     if run.resource.get("reason"):
         parts.append(Text(f"failed: {run.resource['reason']}", style=STYLE_OF_STATE["failed"]))
+    if (late := late_parts(run.resource)) is not None:
+        parts.append(Text(late, style=STYLE_OF_STATE["drifting"]))
     unit = str(run.declaration["time"]["unit"])
     parts += [Text(line) for line in number_lines(report, unit)]
     if report["groups"]:
         parts += [groups_table(report, tolerance), modes_table(report)]
     return Group(*parts)
+
+
+def late_parts(resource: Mapping[str, Any]) -> str | None:
+    """Which parts of a run the others wait for, and for how long; None when nothing waits, or there are no parts."""
+    status = resource.get("parts")
+    if not status or not status["n_late"]:
+        return None
+    late = [one["part"] for one in status["slowest"] if one["next_sequence"] <= resource["next_sequence"]]
+    named = ", ".join(map(str, late[:MAX_NAMED_PARTS])) + (", ..." if status["n_late"] > MAX_NAMED_PARTS else "")
+    return (
+        f"{status['n_late']} of {status['n_parts']} parts are late ({named}): batch {resource['next_sequence']} waits "
+        f"for them since {status['late_since']}, {status['late_seconds']:.0f} s"
+    )

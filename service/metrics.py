@@ -8,7 +8,7 @@ from service.core import Service
 
 MEDIA_TYPE = "application/openmetrics-text; version=1.0.0; charset=utf-8"
 _COUNTERS = {
-    "batches_stored": "Batches stored for the first time.",
+    "batches_stored": "Batches, or parts of them, stored for the first time.",
     "batches_repeated": "Batches recognised as repeats.",
     "snapshots_stored": "Snapshots stored.",
     "bytes_stored": "Bytes of stored batches.",

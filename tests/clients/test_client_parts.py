@@ -16,7 +16,10 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 import pytest
+from typer.testing import CliRunner
 
+from service.cli import app
+from service.commands_status import late_parts
 from slackwater_client import Client, ConflictError, Hook, Run, UnsentWarning
 from tests.clients.building import clean_environment
 from tests.clients.conftest import N_POINTS, Service
@@ -135,7 +138,10 @@ def test_a_rank_is_killed_and_starts_again(
     stored = run.part(part).next_sequence
     assert 2 <= stored < 10
     assert (status["n_late"], status["slowest"][0]["part"], status["slowest"][1]["n_waiting"]) == (1, part, 10 - stored)
+    told = CliRunner().invoke(app, ["status", run.id, "--url", service.url], env={"COLUMNS": "200"}).output
+    assert f"1 of 4 parts are late ({part}): batch {stored} waits for them since" in " ".join(told.split())
     hook = drive(run, part, snapshots, first=5)
+    assert late_parts(run.refresh()) is None
     assert hook.skipped_snapshots == 8 * stored - 5
     check_holds_exactly(run, client.declare(declaration), snapshots)
 

@@ -27,6 +27,7 @@ MAX_TIMES_IN_QUERY = 1000  # about 30 kB of address; servers and proxies often e
 EVEN_FRACTION = 1e-6  # of a step: far above rounding, far below any jitter that a spectrum would show
 SHORTEST_WATCH_SECONDS = 0.5  # no verdict changes faster than this in a way that matters
 LONGEST_HOLD_SECONDS = 20.0  # how long one request lets the service hold the answer; proxies often cut at 30
+CLOSE_HOLD_SECONDS = 10.0  # how long the service holds the answer to a close while it applies what waits
 
 
 class Run:
@@ -243,7 +244,7 @@ class Run:
 
     def close(self) -> ConvergenceReport:
         """Say that no more data will come; what waits is still taken in, then the verdict is final."""
-        self._transport.json("POST", f"{self._path}/close")
+        self._transport.json("POST", f"{self._path}/close", wait_seconds=CLOSE_HOLD_SECONDS)
         return self.convergence()
 
     def delete(self) -> None:

@@ -6,6 +6,7 @@ from service.threads import fix_blas_threads
 
 fix_blas_threads()  # before anything below imports numpy
 
+import errno  # noqa: E402
 import importlib  # noqa: E402
 import logging  # noqa: E402
 from collections.abc import Mapping  # noqa: E402
@@ -96,6 +97,10 @@ def run_service(flags: Mapping[str, object], config: Path | None) -> None:
     except ValidationError as error:
         raise _refused("; ".join(_setting_text(one) for one in error.errors())) from error
     except (DirectoryInUseError, RegistryError, OSError) as error:
+        if isinstance(error, OSError) and error.errno == errno.EADDRINUSE:
+            raise _refused(
+                f"port {settings.port} is in use; choose another with --port, or 0 for a free one"
+            ) from error
         raise _refused(str(error)) from error
     print(f"Slackwater listens on {address_of(settings, listener)}")
     print(f"Data directory: {settings.data_directory.absolute()}")

@@ -36,8 +36,9 @@ def from_validation(errors: list[Any]) -> Problem:
 
 
 def _one_error(error: dict[str, Any]) -> dict[str, Any]:
-    at = ".".join(str(part) for part in error.get("loc", ())) or "body"
-    return {"at": at, "message": str(error.get("msg", "")), "got": _shown(error.get("input"))}
+    at = ".".join(str(part)[:MAX_SHOWN_CHARACTERS] for part in error.get("loc", ())) or "body"
+    message = str(error.get("msg", ""))[: 5 * MAX_SHOWN_CHARACTERS]
+    return {"at": at, "message": message, "got": _shown(error.get("input"))}
 
 
 def _shown(value: Any) -> Any:

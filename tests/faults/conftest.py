@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
@@ -18,18 +18,21 @@ SEED = int(os.environ.get("SLACKWATER_FAULTS_SEED", "20"))
 
 N_AT_ONCE = 2
 
-_counts: list[str] = []
+_INJECTED = "injected"
 
 
-def report(line: str) -> None:
-    """A line for the summary of the campaign."""
-    _counts.append(line)
+@pytest.fixture
+def report(record_property: Callable[[str, object], None]) -> Callable[[str], None]:
+    """Takes a line for the summary of the campaign; with the report of its test, so that any process may run that."""
+    return lambda line: record_property(_INJECTED, line)
 
 
 def pytest_terminal_summary(terminalreporter: pytest.TerminalReporter) -> None:
-    if _counts:
+    tests = [test for kind in ("passed", "failed") for test in terminalreporter.getreports(kind)]
+    lines = [str(line) for test in tests for name, line in test.user_properties if name == _INJECTED]
+    if lines:
         terminalreporter.section(f"faults injected (seed {SEED})")
-        for line in _counts:
+        for line in lines:
             terminalreporter.write_line(line)
 
 

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 import pytest
 
-from tests.faults.conftest import FACTOR, SECONDS, SEED, report
+from tests.faults.conftest import FACTOR, SECONDS, SEED
 from tests.faults.forked import Nursery
 from tests.faults.points import at_all, draw, scratch, summary, undisturbed_run
 from tests.faults.scenario import Journal, check_kept, check_registry, check_result, finish, play, tree
@@ -49,7 +50,7 @@ def points(waiting: bool, calls: list[Call]) -> list[CrashPoint]:
 
 
 @pytest.mark.parametrize("waiting", [True, False], ids=["in step", "at once"])
-def test_killed_at_a_call(nurseries: list[Nursery], waiting: bool) -> None:
+def test_killed_at_a_call(nurseries: list[Nursery], waiting: bool, report: Callable[[str], None]) -> None:
     expected = undisturbed_run(nurseries[0], waiting)
 
     def crash(nursery: Nursery, point: CrashPoint) -> Counter[str]:

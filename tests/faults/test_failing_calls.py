@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import time
 from collections import Counter
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 import pytest
 
-from tests.faults.conftest import FACTOR, SECONDS, SEED, report
+from tests.faults.conftest import FACTOR, SECONDS, SEED
 from tests.faults.forked import Forked, Gone, Nursery
 from tests.faults.points import at_all, draw, scratch, summary, undisturbed_run
 from tests.faults.scenario import (
@@ -49,7 +50,7 @@ def failures(nursery: Nursery, kind: Kind) -> tuple[list[Failure], int]:
 
 
 @pytest.mark.parametrize("kind", [Kind.EIO_ONCE, Kind.EIO_ALWAYS], ids=["once", "for ever"])
-def test_a_call_fails(nurseries: list[Nursery], kind: Kind) -> None:
+def test_a_call_fails(nurseries: list[Nursery], kind: Kind, report: Callable[[str], None]) -> None:
     """With EIO: what was acknowledged is there after a restart, and a failed sync ends all acknowledging."""
     chosen, n_calls = failures(nurseries[0], kind)
     expected = undisturbed_run(nurseries[0], True).tree
@@ -121,7 +122,7 @@ def restarted(nursery: Nursery, data: Path, journal: Journal, expected_tree: lis
 
 
 @pytest.mark.parametrize("kind", [Kind.ENOSPC_ONCE, Kind.ENOSPC_ALWAYS], ids=["once", "until room is made"])
-def test_the_disk_is_full(nurseries: list[Nursery], kind: Kind) -> None:
+def test_the_disk_is_full(nurseries: list[Nursery], kind: Kind, report: Callable[[str], None]) -> None:
     """With ENOSPC: refused with 507, reading goes on, and once there is room all goes on by itself."""
     chosen, n_calls = failures(nurseries[0], kind)
     expected = undisturbed_run(nurseries[0], True).tree

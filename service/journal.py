@@ -26,6 +26,7 @@ from service.problems import Problem
 from service.records import BatchRecord, PartBatch
 from service.shapes import Expected
 from streaming.declaration import RunDeclaration
+from streaming.files import PASSING
 
 logger = logging.getLogger("slackwater")
 
@@ -163,6 +164,8 @@ class JournalFile:
                 raise JournalError(f"{path} has not the {n_bytes} bytes that were acknowledged")
             self._header = parse_header(start[:length])
         except (OSError, NpyError) as error:
+            if isinstance(error, OSError) and error.errno in PASSING:
+                raise
             raise JournalError(f"{path} cannot be read: {error}; restore it from a copy") from error
 
     def verify(self) -> None:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import errno
 import logging
+import sqlite3
 import threading
 
 from service.applier import Applier, Place
@@ -110,6 +111,8 @@ class Worker(threading.Thread):
             if error.errno == errno.EIO:  # the disk itself fails; a full disk or too few handles mend themselves
                 self._place.poison.set(f"run {run_id}: {error}")
             return self._storage_trouble(run_id, str(error))
+        except sqlite3.OperationalError as error:  # of reading the registry; those of writing are problems
+            return self._storage_trouble(run_id, f"the registry could not be read: {error}")
         except (StreamError, JournalError) as error:
             self._fail(run_id, str(error))
         except MemoryError:

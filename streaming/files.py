@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import hashlib
 import json
 import os
@@ -13,6 +14,9 @@ from pathlib import Path
 from streaming.errors import CheckpointError
 
 MANIFEST = "manifest.json"
+
+# Want of handles or memory passes, and says nothing of the file that could not be opened for it.
+PASSING = (errno.EMFILE, errno.ENFILE, errno.ENOMEM)
 
 
 @contextmanager
@@ -48,10 +52,14 @@ def check_manifest(path: Path) -> None:
     ------
     CheckpointError
         naming the first file that is missing, damaged or not listed
+    OSError
+        if nothing can be said of the files at the moment
     """
     try:
         listed = json.loads((path / MANIFEST).read_text())["files"]
     except (OSError, ValueError, KeyError) as error:
+        if isinstance(error, OSError) and error.errno in PASSING:
+            raise
         raise CheckpointError(f"{path / MANIFEST} is missing or damaged; this is not a whole checkpoint") from error
     for name, expected in listed.items():
         file = path / name

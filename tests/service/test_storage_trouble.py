@@ -9,9 +9,11 @@ from pathlib import Path
 import pytest
 
 from service.durable import Poison
-from service.journal import Draft
+from service.journal import Draft, JournalError, JournalFile
 from service.shapes import expect_batch
 from streaming.declaration import RunDeclaration
+from streaming.errors import CheckpointError
+from streaming.files import check_manifest
 from tests.service.serving import RunningService, check_problem, declaration, npy, snapshots
 
 pytestmark = pytest.mark.timeout(60)
@@ -55,3 +57,21 @@ def test_a_folder_removed_by_hand_is_made_again(service: RunningService) -> None
     run = service.declare()
     shutil.rmtree(service.data / "runs" / run)
     assert service.put(run, 0, snapshots(0, 5)).status_code == 201
+
+
+def test_want_of_handles_is_no_damage(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Neither a checkpoint nor a batch is given up because it could not be opened just then."""
+
+    def none_free(*_: object, **__: object) -> None:
+        raise OSError(errno.EMFILE, "too many open files")
+
+    with monkeypatch.context() as patched:
+        patched.setattr(Path, "open", none_free)
+        patched.setattr(Path, "read_text", none_free)
+        for attempt in (lambda: check_manifest(tmp_path), lambda: JournalFile(tmp_path / "none.npy", 10, b"")):
+            with pytest.raises(OSError, match="too many open files"):
+                attempt()
+    with pytest.raises(CheckpointError):
+        check_manifest(tmp_path)
+    with pytest.raises(JournalError):
+        JournalFile(tmp_path / "none.npy", 10, b"")

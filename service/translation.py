@@ -36,8 +36,8 @@ def from_validation(errors: list[Any]) -> Problem:
 
 
 def _one_error(error: dict[str, Any]) -> dict[str, Any]:
-    at = ".".join(str(part)[:MAX_SHOWN_CHARACTERS] for part in error.get("loc", ())) or "body"
-    message = str(error.get("msg", ""))[: 5 * MAX_SHOWN_CHARACTERS]
+    at = ".".join(_sendable(str(part)[:MAX_SHOWN_CHARACTERS]) for part in error.get("loc", ())) or "body"
+    message = _sendable(str(error.get("msg", ""))[: 5 * MAX_SHOWN_CHARACTERS])
     return {"at": at, "message": message, "got": _shown(error.get("input"))}
 
 
@@ -47,7 +47,12 @@ def _shown(value: Any) -> Any:
     if isinstance(value, float):
         return value if math.isfinite(value) else str(value)
     text = value if isinstance(value, str) else type(value).__name__
-    return text[:MAX_SHOWN_CHARACTERS]
+    return _sendable(text[:MAX_SHOWN_CHARACTERS])
+
+
+def _sendable(text: str) -> str:
+    """The text with what UTF-8 cannot hold replaced: JSON can name half a surrogate pair, and no answer can."""
+    return text.encode("utf-8", "replace").decode()
 
 
 def install(app: FastAPI) -> None:

@@ -179,7 +179,7 @@ def declarations() -> dict[str, bytes]:
         "null": b"null",
         "array": b"[1, 2]",
         "not UTF-8": b'{"name": "\xff\xfe"}',
-        "UTF-16": text.encode("utf-16"),
+        "UTF-16, a byte short": text.encode("utf-16")[:-1],
         "lone surrogate": text.replace("roof panel", "\\ud800").encode(),
         "NPY": GOOD,
     }

@@ -37,19 +37,24 @@ class Poster(threading.Thread):
     def __init__(self, address: Callable[[], str], paths: list[tuple[str, bytes]]) -> None:
         super().__init__(daemon=True)
         self._address, self._paths = address, paths
+        self._client = httpx.Client(timeout=10.0)
         self.receipts: list[str] = []
         self.statuses: Counter[int | str] = Counter()
         self.wrong: list[str] = []
         self.stopping = False
 
     def run(self) -> None:
+        with self._client:
+            self._post_all()
+
+    def _post_all(self) -> None:
         for path, body in self._paths:
             while not self.stopping and not self._post(path, body):
                 time.sleep(0.25)  # asked too often, the service has no time to apply
 
     def _post(self, path: str, body: bytes) -> bool:
         try:
-            answer = httpx.put(self._address() + path, content=body, headers=NPY, timeout=10.0)
+            answer = self._client.put(self._address() + path, content=body, headers=NPY)
         except httpx.TransportError as error:
             self.statuses[type(error).__name__] += 1
             return False

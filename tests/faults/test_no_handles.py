@@ -31,8 +31,7 @@ def limit(service: RunningService, spare: int | None) -> None:
     resource.prlimit(service.process.pid, resource.RLIMIT_NOFILE, (soft, hard))
 
 
-@pytest.mark.parametrize("spare", [1, 2, 3, 4])
-def test_no_handles(tmp_path: Path, spare: int, report: Callable[[str], None]) -> None:
+def test_no_handles(tmp_path: Path, report: Callable[[str], None]) -> None:
     data = tmp_path / "data"
     with RunningService(data, environment=SETTINGS) as service:
         run = service.declare()
@@ -43,7 +42,7 @@ def test_no_handles(tmp_path: Path, spare: int, report: Callable[[str], None]) -
         service.end(signal.SIGKILL)  # so that the next one reads a checkpoint and the journal
     with RunningService(data, environment=SETTINGS) as service:
         refused = 0
-        limit(service, spare)
+        limit(service, 0)
         for _ in range(20):
             try:
                 refused += service.put(run, 4, snapshots(4 * BATCH - 5, 4 * BATCH)).status_code >= 500
@@ -51,6 +50,7 @@ def test_no_handles(tmp_path: Path, spare: int, report: Callable[[str], None]) -
                 refused += 1
             time.sleep(0.02)
         limit(service, None)
+        assert refused > 0
         deadline = time.monotonic() + 30
         while service.put(run, 4, snapshots(4 * BATCH - 5, 4 * BATCH)).status_code not in (200, 201):
             assert time.monotonic() < deadline, service.log[-3000:]
@@ -62,4 +62,4 @@ def test_no_handles(tmp_path: Path, spare: int, report: Callable[[str], None]) -
         direct.close()
         np.testing.assert_array_equal(service.array(f"/v1/runs/{run}/modes?n=2"), direct.modes(2))
         assert not list((data / "runs" / run / "checkpoints").glob("*.damaged-*"))
-    report(f"{spare} handles left: {refused} of 20 posts refused, then all went on")
+    report(f"no handle left: {refused} of 20 posts refused, then all went on")

@@ -7,6 +7,7 @@ import numpy.typing as npt
 
 from streaming.declaration import RunDeclaration
 from streaming.errors import DeclarationError, SnapshotError
+from streaming.threads import threads
 
 Float = npt.NDArray[np.floating]
 Array = npt.NDArray[np.float64]
@@ -35,8 +36,7 @@ def parse_snapshots(declaration: RunDeclaration, snapshots: npt.ArrayLike) -> Fl
         raise SnapshotError(f"a batch must have the shape {wanted}, got {batch.shape}")
     with np.errstate(over="ignore"):  # a float64 value too large for float32 becomes infinite and is named below
         rows = np.ascontiguousarray(batch.reshape(len(batch), declaration.n_rows), declaration.real_dtype)
-    for k, row in enumerate(rows):
-        check_finite(declaration, k, row)
+    list(threads().map(lambda k: check_finite(declaration, k, rows[k]), range(len(rows))))
     return rows
 
 

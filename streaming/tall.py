@@ -12,9 +12,7 @@ This is the seam for slabs of rows elsewhere: whoever offers the public methods 
 
 from __future__ import annotations
 
-import os
 from collections.abc import Callable, Iterator
-from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
 from functools import cache
 from typing import TypeVar
@@ -25,21 +23,15 @@ from scipy.linalg import qr, solve_triangular
 from threadpoolctl import ThreadpoolController
 
 from streaming.probes import N_PROBES, rademacher
+from streaming.threads import threads
 
 Float = npt.NDArray[np.floating]
 Array = npt.NDArray[np.float64]
 Result = TypeVar("Result")
 
 PANEL_BYTES = 2 * 1024**2  # of one panel; measured best on machines with 1 MiB of second-level cache per core
-MAX_THREADS = 32
 FIRST_ROW = 2 * N_PROBES  # of the basis in a panel; the sketch and the probes come before
 ORTHONORMAL_EPS = 50.0  # after an ill-conditioned update the basis is made orthonormal beyond this many eps
-
-
-@cache
-def _threads() -> ThreadPoolExecutor:
-    count = int(os.environ.get("SLACKWATER_THREADS", 0)) or len(os.sched_getaffinity(0))
-    return ThreadPoolExecutor(min(count, MAX_THREADS), thread_name_prefix="panel")
 
 
 @cache
@@ -70,6 +62,7 @@ class TallRows:
         self.n_rows, self.dtype = n_rows, np.dtype(dtype)
         self.rank = 0
         self._has_datum = False
+        self._plain: bool | None = None  # all scales are one; not known yet
         capacity = FIRST_ROW + max_rank + block_length
         width = max(256, PANEL_BYTES // (capacity * self.dtype.itemsize))
         self._n_panels = -(-n_rows // width)
@@ -89,13 +82,16 @@ class TallRows:
         Before the datum is known they are kept as they came.
         """
 
+        self._plain = self._plain if self._plain is not None else bool((self._from_panels(self._scale) == 1).all())
+
         def write(k: int) -> None:
             part = snapshots[:, self._columns(k)]
             first = FIRST_ROW + self.rank + position
             rows = self._panels[k, first : first + len(part), : part.shape[1]]
             if self._has_datum:
                 np.subtract(part, self._datum[k, : part.shape[1]], out=rows, casting="same_kind")
-                rows *= self._scale[k, : part.shape[1]]
+                if not self._plain:
+                    rows *= self._scale[k, : part.shape[1]]
             else:
                 rows[...] = part
 
@@ -127,6 +123,7 @@ class TallRows:
         factor = np.where(field_variance > 0, 1.0 / np.sqrt(np.where(field_variance > 0, field_variance, 1.0)), 1.0)
         factors = self._to_panels(np.repeat(factor, self.n_rows // n_fields)).astype(self.dtype)
         self._scale *= factors
+        self._plain = None
         self._each(lambda k: np.multiply(self._rows(k, n_snapshots), factors[k], out=self._rows(k, n_snapshots)))
 
     # -- products ---------------------------------------------------------------------------------------
@@ -277,6 +274,7 @@ class TallRows:
         self._panels[:, :N_PROBES] = self._to_panels(state["sketch"])
         self._datum[...], self._sum[...] = self._to_panels(state["datum"]), self._to_panels(state["sum"])
         self._scale = self._to_panels(state["scale"])
+        self._plain = None
         self._has_datum = has_datum
 
     # -- panels -----------------------------------------------------------------------------------------
@@ -292,7 +290,7 @@ class TallRows:
     def _each(self, work: Callable[[int], Result]) -> list[Result]:
         if self._n_panels == 1:
             return [work(0)]
-        return list(_threads().map(work, range(self._n_panels)))
+        return list(threads().map(work, range(self._n_panels)))
 
     def _to_panels(self, rows: Float) -> Float:
         """(m,) to (n_panels, width), or (q, m) to (n_panels, q, width); the last panel is padded with zeros."""

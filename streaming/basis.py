@@ -95,12 +95,12 @@ class EvolvingBasis:
         rank, dtype = self._declaration.rank, self._declaration.dtype
         step = update_from_gram(self.values, gram, rank, dtype, GRAM_CONDITION[dtype])
         if step is not None:
-            self._tall.rotate(step.transform, probed)
+            self._tall.learn(step.transform, probed)
             return step
         if dtype == "float32":
             step = update_from_gram(self.values, self._tall.gram_in_double(n), rank, dtype, math.inf)
         step = step or update_from_factor(self.values, self._tall.factor(n), rank, dtype)
-        self._tall.rotate(step.transform, probed)
+        self._tall.learn(step.transform, probed)
         self._tall.orthonormalise()
         return step
 

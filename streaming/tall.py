@@ -29,7 +29,7 @@ Float = npt.NDArray[np.floating]
 Array = npt.NDArray[np.float64]
 Result = TypeVar("Result")
 
-PANEL_BYTES = 2 * 1024**2  # of one panel; measured best on machines with 1 MiB of second-level cache per core
+PANEL_BYTES = 4 * 1024**2  # of one panel; measured best on machines with 1 MiB of second-level cache per core
 FIRST_ROW = 2 * N_PROBES  # of the basis in a panel; the sketch and the probes come before
 ORTHONORMAL_EPS = 50.0  # after an ill-conditioned update the basis is made orthonormal beyond this many eps
 
@@ -132,16 +132,13 @@ class TallRows:
         """Return the Gram matrix of [U; Y], (r + n, r + n), and the probes of the snapshots, (n, p).
 
         Products in the dtype of the rows within a panel, sums over panels in float64. With ``straight`` the basis
-        is taken to be orthonormal, which saves its own products. Also adds the snapshots to the running sum, so
-        call it once per block.
+        is taken to be orthonormal, which saves its own products.
         """
         r = self.rank
-        ones = np.ones(n_snapshots, self.dtype)
 
         def products(k: int) -> tuple[Float, Float | None]:
             basis, new = self._rows(k, r), self._panels[k, FIRST_ROW + r : FIRST_ROW + r + n_snapshots]
-            self._sum[k] += ones @ new
-            cross = new @ self._panels[k, N_PROBES : FIRST_ROW + r + n_snapshots].T
+            cross = self._panels[k, N_PROBES : FIRST_ROW + r + n_snapshots] @ new.T
             return cross, None if straight else basis @ basis.T
 
         gram = np.zeros((r + n_snapshots, r + n_snapshots))
@@ -149,8 +146,8 @@ class TallRows:
             gram[:r, :r] = np.eye(r)
         seen = np.zeros((n_snapshots, N_PROBES))
         for cross, inner in self._each(products):
-            seen += cross[:, :N_PROBES]
-            gram[r:] += cross[:, N_PROBES:]
+            seen += cross[:N_PROBES].T
+            gram[r:] += cross[N_PROBES:].T
             if inner is not None:
                 gram[:r, :r] += inner
         gram[:r, r:] = gram[r:, :r].T
@@ -185,18 +182,32 @@ class TallRows:
             stacked = [_triangle(pair, n_all) for pair in pairs]
         return stacked[0].T
 
-    def rotate(self, transform: Array, probed: Array | None = None) -> None:
-        """Replace the basis by transform [U; Y], (q, K), in place; the open block becomes empty.
+    def learn(self, transform: Array, probed: Array) -> None:
+        """Take the open block in: into the basis, transform [U; Y], (q, K), the sketch and the running sum.
 
-        With ``probed`` (n, p), what the probes saw of the open block, the block goes into the sketch first.
+        ``probed`` (n, p) is what the probes saw of the block. One product does all three.
         """
-        small = transform.astype(self.dtype)
-        seen = None if probed is None else probed.T.astype(self.dtype)
-        rank, n_all, first = *small.shape, self.rank
+        rank, n_all = transform.shape
+        stacked = np.zeros((rank + N_PROBES + 1, n_all), self.dtype)
+        stacked[:rank] = transform
+        stacked[rank:-1, self.rank :] = probed.T
+        stacked[-1, self.rank :] = 1.0
 
         def apply(k: int) -> None:
-            if seen is not None:
-                self._panels[k, :N_PROBES] += seen @ self._rows(k, n_all)[first:]
+            product = stacked @ self._rows(k, n_all)
+            self._rows(k, rank)[...] = product[:rank]
+            self._panels[k, :N_PROBES] += product[rank:-1]
+            self._sum[k] += product[-1]
+
+        self._each(apply)
+        self.rank = rank
+
+    def rotate(self, transform: Array) -> None:
+        """Replace the basis by transform U, (q, r), in place."""
+        small = transform.astype(self.dtype)
+        rank, n_all = small.shape
+
+        def apply(k: int) -> None:
             self._rows(k, rank)[...] = small @ self._rows(k, n_all)
 
         self._each(apply)

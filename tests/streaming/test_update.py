@@ -66,16 +66,16 @@ class TestRows:
     def test_basis_coordinates_and_carried_vectors(self) -> None:
         first, second = rows_with(0.9), rows_with(0.8, seed=7)
         tall = filled(first)
-        gram, _ = tall.project(20)
+        gram, probed = tall.project(20)
         one = update_from_factor(np.zeros(0), tall.factor(20), 8, "float64")
-        tall.rotate(one.transform)
+        tall.learn(one.transform, probed)
         old = tall.export(0)["basis"].copy()
         tall.put(0, second)
         gram, seen = tall.project(20)
         np.testing.assert_allclose(seen, second @ rademacher(3000, float).T, atol=1e-10)
         two = update_from_gram(one.singular_values, gram, 8, "float64", math.inf)
         assert two is not None
-        tall.rotate(two.transform)
+        tall.learn(two.transform, seen)
         new = tall.export(0)["basis"]
         np.testing.assert_allclose(new @ new.T, np.eye(8), atol=1e-10)
         np.testing.assert_allclose(two.coordinates, second @ new.T, atol=1e-9)

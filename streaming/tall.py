@@ -12,6 +12,7 @@ This is the seam for slabs of rows elsewhere: whoever offers the public methods 
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from functools import cache
@@ -62,6 +63,7 @@ class TallRows:
         self.n_rows, self.dtype = n_rows, np.dtype(dtype)
         self.rank = 0
         self._has_datum = False
+        self._rooms = threading.local()
         self._plain: bool | None = None  # all scales are one; not known yet
         capacity = FIRST_ROW + max_rank + block_length
         width = max(256, PANEL_BYTES // (capacity * self.dtype.itemsize))
@@ -194,7 +196,7 @@ class TallRows:
         stacked[-1, self.rank :] = 1.0
 
         def apply(k: int) -> None:
-            product = stacked @ self._rows(k, n_all)
+            product = np.matmul(stacked, self._rows(k, n_all), out=self._scratch(len(stacked)))
             self._rows(k, rank)[...] = product[:rank]
             self._panels[k, :N_PROBES] += product[rank:-1]
             self._sum[k] += product[-1]
@@ -287,6 +289,13 @@ class TallRows:
         self._scale = self._to_panels(state["scale"])
         self._plain = None
         self._has_datum = has_datum
+
+    def _scratch(self, n: int) -> Float:
+        """Room for n rows of a panel, kept for each thread: fresh memory for each panel costs page faults."""
+        room: Float | None = getattr(self._rooms, "rows", None)
+        if room is None or len(room) < n:
+            room = self._rooms.rows = np.empty((n, self._width), self.dtype)
+        return room[:n]
 
     # -- panels -----------------------------------------------------------------------------------------
 

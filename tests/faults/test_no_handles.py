@@ -27,7 +27,7 @@ def limit(service: RunningService, spare: int | None) -> None:
     """Leave the process so many handles more than it has, or as many as it likes."""
     in_use = len(os.listdir(f"/proc/{service.process.pid}/fd"))
     hard = resource.prlimit(service.process.pid, resource.RLIMIT_NOFILE)[1]
-    soft = min(hard, 4096) if spare is None else in_use + spare
+    soft = min(hard, 4096) if spare is None else min(3, in_use) + spare  # numbers below 3 are always taken
     resource.prlimit(service.process.pid, resource.RLIMIT_NOFILE, (soft, hard))
 
 
